@@ -1,0 +1,1 @@
+"""The converter seen as conductors and as a circuit."""

@@ -1,0 +1,1 @@
+"""Settings: a mapping goes in; the settings, or every fault with its place, come out."""

@@ -1,0 +1,1 @@
+"""The chain of small steps from readings to assessments and alarm events."""

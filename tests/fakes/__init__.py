@@ -1,0 +1,1 @@
+"""Doubles that keep the protocols of the real parts."""
