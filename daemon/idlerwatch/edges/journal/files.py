@@ -1,0 +1,121 @@
+"""The files of a journal: how they are named, opened and, when old, unlinked.
+
+A file's name holds the first sequence number in it, so that the order of the names is the order of the records, and
+the week it was begun in, for people. A file may go when the file after it began longer ago than is to be kept.
+"""
+
+import sqlite3
+import time
+from collections.abc import Sequence
+from contextlib import suppress
+from dataclasses import dataclass
+from pathlib import Path
+from typing import Final
+
+from idlerwatch.core.blocks import Kind
+
+WEEK_DAYS: Final = 7.0
+_DAY_S: Final = 86400.0
+_PAGE_BYTES: Final = 1024
+_SCHEMA: Final = {
+    "cycle": """
+        CREATE TABLE IF NOT EXISTS shapes (number INTEGER PRIMARY KEY, text TEXT NOT NULL);
+        CREATE TABLE IF NOT EXISTS blocks (
+            first INTEGER PRIMARY KEY, last INTEGER NOT NULL, since REAL, until REAL, body BLOB NOT NULL);
+    """,
+    "event": """
+        CREATE TABLE IF NOT EXISTS events (
+            sequence INTEGER PRIMARY KEY, utc REAL NOT NULL, name TEXT NOT NULL, body TEXT NOT NULL);
+        CREATE INDEX IF NOT EXISTS events_by_name ON events (name, sequence);
+    """,
+}
+_SCHEMA["window"] = _SCHEMA["cycle"]
+
+
+@dataclass(frozen=True, slots=True)
+class Keep:
+    """For how many days each kind is kept; events as long as windows."""
+
+    cycles_days: float = 30.0
+    windows_days: float = 800.0
+
+    def days(self, kind: Kind) -> float:
+        """Return for how long records of a kind are kept."""
+        return self.cycles_days if kind == "cycle" else self.windows_days
+
+    def period(self, kind: Kind, utc: float) -> str:
+        """Return the name of the week (or hour, where little is kept) that a stamp lies in.
+
+        Examples
+        --------
+        >>> Keep().period("cycle", 1796104800.0), Keep(1 / 24, 1 / 24).period("event", 1796104800.0)
+        ('2026w49', '2026-12-01t06')
+        """
+        pattern = "%Gw%V" if self.days(kind) >= WEEK_DAYS else "%Y-%m-%dt%H"
+        return time.strftime(pattern, time.gmtime(utc))
+
+
+def list_files(folder: Path, kind: Kind) -> list[Path]:
+    """Return the files of a kind in the order of their records."""
+    return sorted(folder.glob(f"{kind}s-*.sqlite"))
+
+
+def file_name(kind: Kind, first: int, period: str) -> str:
+    """Return the name of a file that begins with a sequence number."""
+    return f"{kind}s-{first:012d}-{period}.sqlite"
+
+
+def first_of(path: Path) -> int:
+    """Return the first sequence number in a file's name."""
+    return int(path.name.split("-", 2)[1])
+
+
+def period_of(path: Path) -> str:
+    """Return the week or hour in a file's name."""
+    return path.stem.split("-", 2)[2]
+
+
+def open_for_writing(path: Path, kind: Kind) -> sqlite3.Connection:
+    """Open or make a file; a commit of an event is on the disk when it returns, one of a block soon after."""
+    path.parent.mkdir(parents=True, exist_ok=True)
+    connection = sqlite3.connect(path, isolation_level=None, timeout=5.0, check_same_thread=False)
+    try:
+        connection.execute(f"PRAGMA page_size = {_PAGE_BYTES}")
+        connection.execute("PRAGMA journal_mode = WAL")
+        connection.execute(f"PRAGMA synchronous = {'FULL' if kind == 'event' else 'NORMAL'}")
+        connection.executescript(_SCHEMA[kind])
+    except sqlite3.Error:
+        connection.close()
+        raise
+    return connection
+
+
+def open_for_reading(path: Path) -> sqlite3.Connection:
+    """Open a file that this thread only reads."""
+    return sqlite3.connect(f"{path.resolve().as_uri()}?mode=ro", uri=True, isolation_level=None, timeout=5.0)
+
+
+def first_stamp(path: Path, kind: Kind) -> float | None:
+    """Return the stamp of the first record in a file, POSIX seconds."""
+    question = "SELECT utc FROM events" if kind == "event" else "SELECT since FROM blocks"
+    connection = open_for_reading(path)
+    try:
+        row = connection.execute(f"{question} ORDER BY 1 LIMIT 1").fetchone()
+    finally:
+        connection.close()
+    return None if row is None else float(row[0])
+
+
+def unlink_old(folder: Path, kind: Kind, keep: Keep, utc: float) -> Sequence[Path]:
+    """Unlink the files whose successor began longer ago than records of the kind are kept."""
+    gone: list[Path] = []
+    files = list_files(folder, kind)
+    for path, successor in zip(files, files[1:], strict=False):
+        began = first_stamp(successor, kind)
+        if began is None or began > utc - keep.days(kind) * _DAY_S:
+            break
+        for part in (path, path.with_name(path.name + "-wal"), path.with_name(path.name + "-shm")):
+            with suppress(FileNotFoundError):
+                part.unlink()
+        gone.append(path)
+    return gone
