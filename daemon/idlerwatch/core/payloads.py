@@ -218,7 +218,7 @@ def read_command(command: str, payload: bytes, at: float) -> Acknowledge | Shelv
 
 def _word(command: str, body: Mapping[str, Any], key: str) -> str:
     word = body.get(key)
-    if not isinstance(word, str) or not 0 < len(word) <= 100:  # noqa: PLR2004 - a name, not a letter
+    if not isinstance(word, str) or not 0 < len(word) <= 100:
         raise ValueError(f"{command}: {key} is {str(word)[:80]!r}, must be a word")
     return word
 

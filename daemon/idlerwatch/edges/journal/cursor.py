@@ -52,12 +52,17 @@ class Cursor:
     def _write(self) -> None:
         if self._written == self.at:
             return
-        descriptor = os.open(self._path, os.O_WRONLY | os.O_CREAT | os.O_CLOEXEC, 0o640)
+        try:
+            descriptor = os.open(self._path, os.O_WRONLY | os.O_CREAT | os.O_CLOEXEC, 0o640)
+        except OSError:
+            return  # the journal tells what is wrong with the disk; the next move tries again
         try:
             os.pwrite(descriptor, f"{self.at:0{_DIGITS}d}\n".encode(), 0)
+            self._written = self.at
+        except OSError:
+            return
         finally:
             os.close(descriptor)
-        self._written = self.at
         self._written_at = self._monotonic()
 
 

@@ -4,6 +4,7 @@ A file's name holds the first sequence number in it, so that the order of the na
 the week it was begun in, for people. A file may go when the file after it began longer ago than is to be kept.
 """
 
+import itertools
 import sqlite3
 import time
 from collections.abc import Sequence
@@ -110,7 +111,7 @@ def unlink_old(folder: Path, kind: Kind, keep: Keep, utc: float) -> Sequence[Pat
     """Unlink the files whose successor began longer ago than records of the kind are kept."""
     gone: list[Path] = []
     files = list_files(folder, kind)
-    for path, successor in zip(files, files[1:], strict=False):
+    for path, successor in itertools.pairwise(files):
         began = first_stamp(successor, kind)
         if began is None or began > utc - keep.days(kind) * _DAY_S:
             break

@@ -63,6 +63,7 @@ class Journal:
         self,
         path: str | Path,
         commit_s: float = 30.0,
+        *,
         keep: Keep = Keep(),  # noqa: B008 - frozen
         report: Report = lambda _: None,
         is_synchronised: Callable[[], bool] = _always,
