@@ -198,3 +198,7 @@ def split_running(current=12.0):
     """The split-phase shed's meters while the converter idles."""
     half = {"voltage": 120.0, "current": current, "power": 25.0 * current, "reactive": 100.0 * current}
     return {"supply": numbered(half, half) | {(0, "frequency"): 60.0}, "lines": numbered_lines()}
+
+
+SURGE = supply_says(voltage=212.0, current=110.0, power=9000.0, reactive=21000.0)
+"""The supply's meter in a start across the line."""

@@ -10,7 +10,7 @@ from collections.abc import Mapping
 from dataclasses import dataclass
 from typing import Final, Literal
 
-from idlerwatch.core.conductors import Conductor, Feed, Pair
+from idlerwatch.core.conductors import LEGS, Conductor, Feed, Leg, Pair
 from idlerwatch.core.settings.model import Bank, Machine, Meter
 from idlerwatch.core.values import FigureKey
 
@@ -138,6 +138,21 @@ class Plan:
     banks: tuple[Bank, ...]
     machines: tuple[Machine, ...]
     remarks: tuple[str, ...]
+
+    @property
+    def rotation(self) -> tuple[Leg, ...]:
+        """The legs in the order in which they peak."""
+        return ("L1", "L2", "L3") if self.feed.rotation == "L1-L2-L3" else ("L1", "L3", "L2")
+
+    @property
+    def has_central_neutral(self) -> bool:
+        """Whether N is nominally the centre of the triangle, so that zero sequence means anything."""
+        return self.feed.neutral == "supply"
+
+    @property
+    def neutral_earth_pair(self) -> str:
+        """The pair across which neutral to earth stands: the fed leg that is the utility's neutral, else N."""
+        return f"{self.feed.neutral}-PE" if self.feed.neutral in LEGS else "N-PE"
 
     @property
     def watches_generated(self) -> bool:

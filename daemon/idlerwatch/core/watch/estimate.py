@@ -1,0 +1,245 @@
+"""Third step: phasors from magnitudes, where enough distances between the conductors are measured.
+
+Every voltage is a distance between two conductors in the complex plane; the conductor map finds the points
+(`electrical.md` 4). All that follows from them (sequence components, unbalance, voltages nobody measured, neutral to
+earth) gets its uncertainty by fitting, in the same vectorised call, once more for each voltmeter with its reading moved
+by its standard uncertainty: correlations between the results are then right by construction.
+
+* Three line voltages, or five different pairs, show the angles: they are *measured*. Magnitudes to neutral alone do
+  not, and then there is no unbalance factor and no line voltage: unknown, never normal.
+* Where the distances contradict each other beyond their uncertainty the one that fits worst is named. With two or more
+  to spare it is left out and the rest is used, if that fits; if nothing fits, nothing is told.
+* While the generated legs carry no voltage there is nothing to map.
+"""
+
+import math
+from collections.abc import Mapping
+from dataclasses import dataclass, replace
+from typing import Final, Literal
+
+import numpy as np
+import numpy.typing as npt
+
+from idlerwatch.core.conductors import CONDUCTORS, EARTH_PAIRS, LINE_PAIRS, NEUTRAL_PAIRS, Conductor, Pair
+from idlerwatch.core.converter.conductor_map import fit_conductors
+from idlerwatch.core.electrical.sequence import sequence_components
+from idlerwatch.core.values import Known
+from idlerwatch.core.watch.derive import MISSING, Derived, Measured
+from idlerwatch.core.watch.plan import Plan
+
+Floats = npt.NDArray[np.float64]
+Complexes = npt.NDArray[np.complex128]
+Told = tuple[Measured, Known]
+
+NOT_TOLD: Final[Told] = (MISSING, "not measured")
+STANDING_STILL: Final = 0.2
+"""Below this height of the generated legs nothing is mapped."""
+CHI_SQUARE: Final = (math.inf, 10.83, 13.82, 16.27, 18.47, 20.52, 22.46, 24.32, 26.12, 27.88, 29.59)
+"""The 0.999 quantiles of chi-square for 1 to 10 degrees of freedom (standard table)."""
+GROSS: Final = 25.0
+"""With one distance to spare nobody can say which is wrong: beyond five times its limit nothing is told."""
+
+_NUMBER: Final[Mapping[Conductor, int]] = {conductor: index for index, conductor in enumerate(CONDUCTORS)}
+_PAIRS: Final = (*LINE_PAIRS, *NEUTRAL_PAIRS)
+
+
+@dataclass(frozen=True, slots=True)
+class Estimate:
+    """What geometry makes of one sample.
+
+    `voltages` holds every line and leg-to-neutral pair, measured or mapped; `components` V0, V1, V2; `known` says how
+    what rests on line voltages is known; `points` is empty where angles were not seen.
+    """
+
+    angles: Literal["measured", "not seen"]
+    known: Known
+    voltages: Mapping[str, Told]
+    components: tuple[Measured, Measured, Measured] = (MISSING, MISSING, MISSING)
+    unbalance_factor: Measured = MISSING
+    neutral_earth: Told = NOT_TOLD
+    points: Mapping[Conductor, complex] | None = None
+    remarks: tuple[str, ...] = ()
+
+
+@dataclass(frozen=True, slots=True)
+class _Distances:
+    """What is fitted: pairs, the meters' names, values and standard uncertainties."""
+
+    pairs: tuple[Pair, ...]
+    meters: tuple[str, ...]
+    values: Floats
+    standards: Floats
+
+    def without(self, index: int) -> "_Distances":
+        """Return all distances but one."""
+        keep = [position for position in range(len(self.pairs)) if position != index]
+        return _Distances(
+            tuple(self.pairs[position] for position in keep),
+            tuple(self.meters[position] for position in keep),
+            self.values[keep],
+            self.standards[keep],
+        )
+
+
+@dataclass(frozen=True, slots=True)
+class _Fit:
+    """Points of the sample (row 0) and of each distance moved, and how well they fit."""
+
+    points: Complexes
+    chi_square: float
+    spare: int
+    misfit: int
+
+    @property
+    def limit(self) -> float:
+        """The chi-square that is still believed."""
+        return CHI_SQUARE[min(self.spare, len(CHI_SQUARE) - 1)]
+
+    @property
+    def is_believed(self) -> bool:
+        """Whether the distances agree within their uncertainty."""
+        return self.chi_square <= self.limit
+
+
+def estimate(plan: Plan, derived: Derived) -> Estimate:
+    """Return what geometry makes of one sample's voltages."""
+    voltages = _measured_voltages(plan, derived)
+    plain = Estimate("not seen", "not measured", voltages, neutral_earth=_measured_earth(plan, derived))
+    if derived.generated < STANDING_STILL or not _shows_angles(voltages, derived.voltages):
+        return plain
+    return _mapped(plan, plain, _distances(plan, derived, voltages))
+
+
+def _measured_voltages(plan: Plan, derived: Derived) -> dict[str, Told]:
+    voltages: dict[str, Told] = dict.fromkeys(map(str, _PAIRS), NOT_TOLD)
+    voltages.update((pair, (value, "measured")) for pair, value in derived.voltages.items() if pair in voltages)
+    if plan.fed_pair not in derived.voltages and derived.supply.voltage.is_known:
+        voltages[plan.fed_pair] = (derived.supply.voltage, "computed")
+    return voltages
+
+
+def _measured_earth(plan: Plan, derived: Derived) -> Told:
+    measured = derived.voltages.get(plan.neutral_earth_pair, MISSING)
+    return (measured, "measured") if measured.is_known else NOT_TOLD
+
+
+def _shows_angles(voltages: Mapping[str, Told], measured: Mapping[str, Measured]) -> bool:
+    """Return whether the three legs can be a rigid figure: three lines, or five pairs."""
+    return all(voltages[str(pair)][0].is_known for pair in LINE_PAIRS) or len(measured) >= 5
+
+
+def _distances(plan: Plan, derived: Derived, voltages: Mapping[str, Told]) -> _Distances:
+    """Return the distances to fit: every voltmeter's; only the lines where one of them is the sum of two halves."""
+    if voltages[plan.fed_pair][1] == "computed":
+        lines = [(pair, voltages[str(pair)][0]) for pair in LINE_PAIRS if voltages[str(pair)][0].is_known]
+        return _Distances(
+            tuple(pair for pair, _ in lines),
+            ("",) * len(lines),
+            np.array([measured.value for _, measured in lines]),
+            np.array([measured.standard for _, measured in lines]),
+        )
+    known = [
+        (channel, value)
+        for channel, value in zip(plan.distances, derived.distances, strict=True)
+        if not math.isnan(value) and channel.across is not None
+    ]
+    return _Distances(
+        tuple(channel.across for channel, _ in known if channel.across is not None),
+        tuple(channel.meter for channel, _ in known),
+        np.array([value for _, value in known]),
+        np.array([value * channel.voltage_gain for channel, value in known]),
+    )
+
+
+# --------------------------------------------------------------------------
+# The map
+# --------------------------------------------------------------------------
+
+
+def _fit(plan: Plan, distances: _Distances) -> _Fit:
+    """Fit the sample and, beside it, the sample with each distance moved by its standard uncertainty."""
+    # a reading of zero has no relative error; a millivolt keeps its weight finite
+    standards = np.maximum(distances.standards, 1e-3)
+    moved = np.vstack([distances.values, distances.values + np.diag(standards)])
+    found = fit_conductors(plan.feed, distances.pairs, moved, np.broadcast_to(standards, moved.shape))
+    return _Fit(
+        points=np.asarray(found.points),
+        chi_square=float(np.ravel(found.chi_square)[0]),
+        spare=int(np.ravel(found.degrees_of_freedom)[0]),
+        misfit=int(np.ravel(found.misfit)[0]),
+    )
+
+
+def _mapped(plan: Plan, plain: Estimate, distances: _Distances) -> Estimate:
+    fit = _fit(plan, distances)
+    if fit.is_believed:
+        return _with_points(plan, plain, fit)
+    if fit.misfit < 0 or math.isnan(fit.chi_square):
+        return replace(plain, remarks=(NOTHING_FITS,))
+    worst = f"{distances.meters[fit.misfit]}'s {distances.pairs[fit.misfit]} does not fit the other voltages"
+    if fit.spare > 1:
+        rest = _fit(plan, distances.without(fit.misfit))
+        if rest.is_believed:
+            return replace(_with_points(plan, plain, rest), remarks=(f"{worst}: left out of the angles",))
+    elif fit.chi_square <= GROSS * fit.limit:
+        return replace(_with_points(plan, plain, fit), remarks=(worst,))
+    return replace(plain, remarks=(f"{worst}: no angles from these",))
+
+
+NOTHING_FITS: Final = "the voltages contradict each other: no angles from these"
+
+
+def _with_points(plan: Plan, plain: Estimate, fit: _Fit) -> Estimate:
+    """Return the estimate with everything that follows from the points."""
+    legs = fit.points[:, :3]
+    if np.isnan(legs).any():
+        return plain
+    voltages = {pair: told if told[0].is_known else _distance(fit, pair) for pair, told in plain.voltages.items()}
+    components = _components(plan, fit)
+    magnitudes = np.abs(components)
+    is_measured = all(plain.voltages[str(pair)][1] == "measured" for pair in LINE_PAIRS)
+    earth = plain.neutral_earth if plain.neutral_earth[0].is_known else _distance(fit, plan.neutral_earth_pair)
+    zero, positive, negative = (_column(magnitudes[:, index]) for index in range(3))
+    return replace(
+        plain,
+        angles="measured",
+        known="measured" if is_measured else "mapped",
+        voltages=voltages,
+        components=(zero, positive, negative),
+        unbalance_factor=_column(magnitudes[:, 2] / magnitudes[:, 1]),
+        neutral_earth=earth,
+        points={
+            conductor: complex(point)
+            for conductor, point in zip(CONDUCTORS, fit.points[0].tolist(), strict=True)
+            if not math.isnan(point.real)
+        },
+    )
+
+
+def _components(plan: Plan, fit: _Fit) -> Complexes:
+    """Return V0, V1, V2 along the declared rotation; V0 only where N is nominally the centre of the triangle."""
+    order = [_NUMBER[leg] for leg in plan.rotation]
+    neutral = fit.points[:, 3] if plan.has_central_neutral else np.full(len(fit.points), np.nan + 0j)
+    reference = np.where(np.isnan(neutral), 0.0, neutral)
+    components = np.array(sequence_components(fit.points[:, order] - reference[:, None]))
+    components[np.isnan(neutral), 0] = np.nan
+    return components
+
+
+def _distance(fit: _Fit, pair: str) -> Told:
+    first, second = (_NUMBER[conductor] for conductor in _CONDUCTORS_OF[pair])
+    measured = _column(np.abs(fit.points[:, first] - fit.points[:, second]))
+    return (measured, "mapped") if measured.is_known else NOT_TOLD
+
+
+_CONDUCTORS_OF: Final[Mapping[str, tuple[Conductor, Conductor]]] = {
+    str(pair): (pair.first, pair.second) for pair in (*_PAIRS, *EARTH_PAIRS)
+}
+
+
+def _column(values: Floats) -> Measured:
+    """Return the first value, and the root of the sum of squares of the others' differences from it."""
+    first, *others = values.tolist()
+    if math.isnan(first):
+        return MISSING
+    return Measured(first, math.sqrt(sum((other - first) ** 2 for other in others if not math.isnan(other))))

@@ -1,0 +1,82 @@
+"""The chain, threaded: readings in, one assessment a cycle, alarm events and closed windows out.
+
+`Watch` is a frozen value: `take` returns the next one beside the outputs, so that the daemon, a replay from the journal
+and a test run the very same thing, and the same inputs always give the same outputs. Readings only move the first
+step; the whole chain runs at the end of a cycle:
+
+    align -> derive -> estimate -> life -> assess -> alarms -> windows
+
+The alarm step is given the window rows that the sample before closed, since a row is only known when the next window
+begins; what people and the tool itself say (`Acknowledge`, `Shelve`, `Trouble`) waits for the end of the cycle.
+"""
+
+from dataclasses import dataclass, replace
+
+from idlerwatch.core.settings.model import Settings
+from idlerwatch.core.values import (
+    Acknowledge,
+    Input,
+    Output,
+    Sample,
+    Shelve,
+    StandingAlarm,
+    Trouble,
+    WindowRow,
+)
+from idlerwatch.core.watch.alarms import AlarmsState, begin_alarms, judge_alarms
+from idlerwatch.core.watch.align import AlignState, begin_align, step
+from idlerwatch.core.watch.assess import assess
+from idlerwatch.core.watch.compile import compile_plan
+from idlerwatch.core.watch.derive import derive
+from idlerwatch.core.watch.estimate import estimate
+from idlerwatch.core.watch.life import LifeState, begin_life, judge_life
+from idlerwatch.core.watch.plan import Plan
+from idlerwatch.core.watch.windows import WindowsState, begin_windows, step_windows
+
+Told = Acknowledge | Shelve | Trouble
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Watch:
+    """The state of the whole chain between two inputs."""
+
+    plan: Plan
+    align: AlignState
+    life: LifeState
+    alarms: AlarmsState
+    windows: WindowsState
+    told: tuple[Told, ...] = ()
+    rows: tuple[WindowRow, ...] = ()
+
+    @staticmethod
+    def begin(settings: Settings, standing: tuple[StandingAlarm, ...] = ()) -> "Watch":
+        """Return the watch before the first input, with the alarms that stood at the end of the last run."""
+        plan = compile_plan(settings)
+        return Watch(
+            plan=plan,
+            align=begin_align(plan.slow),
+            life=begin_life(),
+            alarms=begin_alarms(settings, standing),
+            windows=begin_windows(plan.cycle_s),
+        )
+
+    def take(self, event: Input) -> tuple["Watch", tuple[Output, ...]]:
+        """Take one input; a cycle's end gives an assessment, then alarm events, then rows of closed windows."""
+        if isinstance(event, (Acknowledge, Shelve, Trouble)):
+            return replace(self, told=(*self.told, event)), ()
+        align, sample = step(self.align, event)
+        watch = replace(self, align=align)
+        return (watch, ()) if sample is None else _judge(watch, sample)
+
+
+def _judge(watch: Watch, sample: Sample) -> tuple[Watch, tuple[Output, ...]]:
+    """Run the chain on one sample."""
+    derived = derive(watch.plan, sample)
+    seen = estimate(watch.plan, derived)
+    life = judge_life(watch.plan, watch.life, sample.at, derived)
+    judged = assess(watch.plan, sample, derived, seen, life)
+    alarms, events, standing, lamp = judge_alarms(watch.alarms, judged, watch.told, watch.rows)
+    assessment = replace(judged, alarms=standing, lamp=lamp)
+    windows, rows = step_windows(watch.windows, assessment)
+    after = replace(watch, life=life, alarms=alarms, windows=windows, told=(), rows=rows)
+    return after, (assessment, *events, *rows)

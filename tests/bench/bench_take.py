@@ -1,0 +1,105 @@
+"""How long `Watch.take` needs for one cycle: median and 99th percentile, for installations of four to six meters.
+
+    python tests/bench/bench_take.py
+
+Prints a row an installation: the whole cycle (all readings and its end), and the end alone. The budget is one
+millisecond at each end of a cycle, everything included; the time of a fixed piece of arithmetic stands beside it, so
+that figures of different machines can be compared.
+"""
+
+import random
+import statistics
+import sys
+import time
+from pathlib import Path
+
+sys.path.insert(0, str(Path(__file__).resolve().parents[1]))
+
+from fakes.sheds import (  # the tests' path is set above
+    LEG_METERS,
+    cycle,
+    running,
+    said,
+    slipway,
+    slipway_lines,
+    split_phase,
+    split_running,
+    supply_says,
+)
+from idlerwatch.core.values import CycleEnd
+from idlerwatch.core.watch.watch import Watch
+
+BUDGET_S = 1e-3
+CYCLES = 3000
+
+
+def six_voltages():
+    lines = {(k, "voltage"): v for k, v in enumerate((230.0, 228.0, 233.0, 396.0, 400.0, 401.0), 1)}
+    powers = {
+        (k, q): v for k in (1, 2, 3) for q, v in (("current", 5.0), ("active_power", 800.0), ("reactive_power", 700.0))
+    }
+    return {"supply": supply_says(current=22.0, power=3000.0), "legs": lines | powers, "earth": said(1.5)}
+
+
+INSTALLATIONS = {
+    "six meters, magnitudes to N": (slipway(), running()),
+    "three meters, six voltages": (slipway_lines(), six_voltages()),
+    "six meters, six voltages": (
+        slipway_lines(*LEG_METERS),
+        six_voltages() | {f"leg-{k}": said(229.0 + k, 5.0, 800.0, 700.0) for k in (1, 2, 3)},
+    ),
+    "two meters, split phase": (split_phase(), split_running()),
+}
+
+
+def shaken(meters, chance):
+    return {
+        name: {key: value * chance.gauss(1.0, 2e-4) for key, value in values.items()} for name, values in meters.items()
+    }
+
+
+def run(settings, meters):
+    chance = random.Random(7)
+    streams = [list(cycle(float(at), shaken(meters, chance))) for at in range(CYCLES)]
+    watch, ends, wholes = Watch.begin(settings), [], []
+    for stream in streams:
+        whole = 0.0
+        for event in stream:
+            began = time.perf_counter()
+            watch, _ = watch.take(event)
+            took = time.perf_counter() - began
+            whole += took
+            if isinstance(event, CycleEnd):
+                ends.append(took)
+        wholes.append(whole)
+    return ends[100:], wholes[100:]
+
+
+def yardstick():
+    """A fixed piece of arithmetic of plain Python: a million additions. [s]"""
+    began = time.perf_counter()
+    total = 0
+    for number in range(1_000_000):
+        total += number
+    return time.perf_counter() - began
+
+
+def main():
+    print(f"yardstick (a million additions): {yardstick() * 1e3:.1f} ms")
+    print(f"{'installation':30} {'end, median':>12} {'end, p99':>12} {'cycle, median':>14} {'cycle, p99':>12}")
+    worst = 0.0
+    for name, (settings, meters) in INSTALLATIONS.items():
+        ends, wholes = run(settings, meters)
+        figures = [
+            each * 1e3
+            for times in (ends, wholes)
+            for each in (statistics.median(times), statistics.quantiles(times, n=100)[98])
+        ]
+        worst = max(worst, statistics.median(ends))
+        print(f"{name:30} {figures[0]:9.3f} ms {figures[1]:9.3f} ms {figures[2]:11.3f} ms {figures[3]:9.3f} ms")
+    print(f"median over budget of {BUDGET_S * 1e3:.0f} ms: {worst / BUDGET_S:.2f}")
+    return 0 if worst <= BUDGET_S else 1
+
+
+if __name__ == "__main__":
+    sys.exit(main())
