@@ -123,7 +123,8 @@ def found(settings=None, life=None, **evidence):
         ({"current": 65.5, "generated": 0.1}, "surging"),
         ({"current": 65.0}, "unseen"),
         ({"current": 65.5}, "surging"),
-        ({"current": 65.5, "generated": 0.71}, "turning"),
+        ({"current": 65.0, "generated": 0.71}, "turning"),
+        ({"current": 65.5, "generated": 0.71}, "surging"),
         ({"current": 20.0, "supply_ratio": 0.09, "generated": 0.5}, "coasting"),
         ({"current": 20.0, "supply_ratio": 0.11, "generated": 0.5}, "rising"),
         ({"supply_ratio": 0.09}, "still"),
@@ -341,6 +342,10 @@ def test_a_machine_is_on_from_a_seventh_of_the_smallest_rated_current(amperes, l
 @pytest.mark.parametrize(("amperes", "loading"), [(10.1, "loaded"), (10.3, "machine starting")])
 def test_a_machine_starts_at_three_times_the_smallest_rated_current(amperes, loading):
     assert last(slipway(), (3, running()), (1, loaded(amperes))).loading == loading
+
+
+def test_a_converter_found_at_work_is_loaded_and_no_machine_is_starting():
+    assert last(slipway(), (2, loaded(12.0))).loading == "loaded"
 
 
 def test_a_machines_start_lasts_thirty_seconds_at_most():

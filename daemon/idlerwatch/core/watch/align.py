@@ -64,7 +64,7 @@ def step(state: AlignState, event: Input) -> tuple[AlignState, Sample | None]:
 def _note(state: AlignState, event: Reading | MeterSilent) -> AlignState:
     if event.meter not in state.slow_keys or not math.isfinite(event.at):
         return state
-    return replace(state, now={**state.now, event.meter: event})
+    return AlignState(state.slow_keys, state.before, {**state.now, event.meter: event}, state.slow, state.last_at)
 
 
 def _close(state: AlignState, end: CycleEnd) -> tuple[AlignState, Sample]:

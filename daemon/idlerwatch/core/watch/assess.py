@@ -15,7 +15,8 @@ from typing import Final
 from idlerwatch.core.conductors import LEGS, LINE_PAIRS, Leg
 from idlerwatch.core.values import UNKNOWN, Assessment, Figure, Known, Sample
 from idlerwatch.core.watch.bank_current import bank_current_ratio
-from idlerwatch.core.watch.derive import MISSING, Derived, Measured, power_factor
+from idlerwatch.core.watch.channel import MISSING, Measured, power_factor
+from idlerwatch.core.watch.derive import Derived
 from idlerwatch.core.watch.estimate import STANDING_STILL, Estimate
 from idlerwatch.core.watch.life import LifeState
 from idlerwatch.core.watch.plan import Plan
@@ -69,7 +70,8 @@ def meter_states(plan: Plan, derived: Derived, life: LifeState) -> Mapping[str, 
 
 def told(measured: Measured, known: Known = "measured") -> Figure:
     """Return a measured value as a figure; unknown where it is missing."""
-    return Figure(measured.value, K * measured.standard, known) if measured.is_known else UNKNOWN
+    value = measured.value
+    return UNKNOWN if math.isnan(value) else Figure(value, K * measured.standard, known)
 
 
 def _figures(plan: Plan, derived: Derived, estimate: Estimate, life: LifeState) -> Iterator[Row]:

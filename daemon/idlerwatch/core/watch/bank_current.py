@@ -10,9 +10,10 @@ import math
 from collections.abc import Mapping
 from typing import Final
 
-from idlerwatch.core.conductors import Conductor, Pair
+from idlerwatch.core.conductors import LEGS, Conductor, Pair
 from idlerwatch.core.values import Known
-from idlerwatch.core.watch.derive import MISSING, Derived, Measured
+from idlerwatch.core.watch.channel import MISSING, Measured
+from idlerwatch.core.watch.derive import Derived
 from idlerwatch.core.watch.estimate import Estimate
 from idlerwatch.core.watch.plan import CapacitorPlan, ChannelPlan, Plan
 
@@ -96,8 +97,8 @@ def _assumed_points(plan: Plan, estimate: Estimate) -> Mapping[Conductor, comple
     if plan.feed.is_line_feed:
         return {}
     points: dict[Conductor, complex] = {"N": 0j}
-    for leg in ("L1", "L2", "L3"):
+    for leg in LEGS:
         measured = estimate.voltages[f"{leg}-N"][0]
         if measured.is_known:
-            points[leg] = cmath.rect(measured.value, cmath.phase(plan.points[leg]))  # type: ignore[index]
-    return points  # type: ignore[return-value]
+            points[leg] = cmath.rect(measured.value, cmath.phase(plan.points[leg]))
+    return points

@@ -16,48 +16,25 @@ says of generated legs.
 """
 
 import math
-from collections.abc import Iterable, Iterator, Mapping
+from collections.abc import Iterator, Mapping
 from dataclasses import dataclass
-from typing import Final
 
 from idlerwatch.core.conductors import LEGS
-from idlerwatch.core.values import FigureKey, Sample
+from idlerwatch.core.values import Sample
+from idlerwatch.core.watch.channel import (
+    MISSING,
+    NAN,
+    NO_POWER,
+    Measured,
+    Power,
+    largest_of,
+    power_factor,
+    power_of,
+    sum_of,
+    value_of,
+    voltage_of,
+)
 from idlerwatch.core.watch.plan import ChannelPlan, Height, Plan
-
-NAN: Final = math.nan
-SMALLEST_APPARENT_POWER: Final = 5.0
-"""Below this a power factor is noise over noise and is not told. [VA]"""
-
-
-@dataclass(frozen=True, slots=True)
-class Measured:
-    """A value and its standard uncertainty; NaN where it is missing."""
-
-    value: float = NAN
-    standard: float = NAN
-
-    @property
-    def is_known(self) -> bool:
-        """Whether there is a value."""
-        return not math.isnan(self.value)
-
-
-MISSING: Final = Measured()
-
-
-@dataclass(frozen=True, slots=True)
-class Power:
-    """What one place says: voltage, current, powers and power factor, each with its uncertainty."""
-
-    voltage: Measured = MISSING
-    current: Measured = MISSING
-    active: Measured = MISSING
-    reactive: Measured = MISSING
-    apparent: Measured = MISSING
-    factor: Measured = MISSING
-
-
-NO_POWER: Final = Power()
 
 
 @dataclass(frozen=True, slots=True)
@@ -86,7 +63,7 @@ class Derived:
 
 def derive(plan: Plan, sample: Sample) -> Derived:
     """Return what a sample says of each pair, leg and place."""
-    distances = tuple(_voltage(sample, channel) for channel in plan.distances)
+    distances = tuple(voltage_of(sample, channel) for channel in plan.distances)
     voltages = _combine(plan, distances)
     legs = _legs(plan, sample)
     return Derived(
@@ -100,7 +77,7 @@ def derive(plan: Plan, sample: Sample) -> Derived:
         energy=_energy(plan, sample),
         banks={name: _together(sample, channels) for name, channels in plan.bank_channels.items()},
         machines={name: _together(sample, channels) for name, channels in plan.machine_channels.items()},
-        contacts={means: _value(sample, meter, key) for means, (meter, key) in plan.contacts.items()},
+        contacts={means: value_of(sample, meter, key) for means, (meter, key) in plan.contacts.items()},
         meters=_meters(plan, sample, distances, voltages),
         generated=_generated(plan, voltages),
     )
@@ -109,15 +86,6 @@ def derive(plan: Plan, sample: Sample) -> Derived:
 # --------------------------------------------------------------------------
 # Voltages
 # --------------------------------------------------------------------------
-
-
-def _value(sample: Sample, meter: str, key: FigureKey) -> float:
-    values = sample.values.get(meter)
-    return NAN if values is None else values.get(key, NAN)
-
-
-def _voltage(sample: Sample, channel: ChannelPlan) -> float:
-    return abs(_value(sample, channel.meter, (channel.channel, "voltage")))
 
 
 def _combine(plan: Plan, distances: tuple[float, ...]) -> Mapping[str, Measured]:
@@ -161,46 +129,6 @@ def _height(rule: Height, value: float) -> float:
 # --------------------------------------------------------------------------
 
 
-def _power(sample: Sample, channel: ChannelPlan) -> Power:
-    """Return what a channel says at its place; reactive power only where it has a sign."""
-    values = sample.values.get(channel.meter)
-    if values is None:
-        return NO_POWER
-    number, ratio = channel.channel, channel.ratio
-    voltage = abs(values.get((number, "voltage"), NAN))
-    current = abs(values.get((number, "current"), NAN)) * ratio
-    active = values.get((number, "active_power"), NAN) * ratio
-    reactive = values.get((number, "reactive_power"), NAN) * ratio if channel.reactive == "signed" else NAN
-    watts = Measured(active, abs(active) * channel.power_gain)
-    apparent = _apparent(channel, values.get((number, "apparent_power"), NAN) * ratio, voltage * current)
-    return Power(
-        voltage=Measured(voltage, voltage * channel.voltage_gain),
-        current=Measured(current, current * channel.current_gain),
-        active=watts,
-        reactive=Measured(reactive, abs(reactive) * channel.power_gain),
-        apparent=apparent,
-        factor=power_factor(watts, apparent, values.get((number, "power_factor"), NAN)),
-    )
-
-
-def _apparent(channel: ChannelPlan, told: float, product: float) -> Measured:
-    """Return what the meter tells, else voltage times current."""
-    if math.isnan(told):
-        return Measured(product, product * math.hypot(channel.voltage_gain, channel.current_gain))
-    return Measured(abs(told), abs(told) * channel.power_gain)
-
-
-def power_factor(active: Measured, apparent: Measured, told: float = NAN) -> Measured:
-    """Return active over apparent power; what the meter itself says where one is missing; nothing below 5 VA."""
-    if apparent.value < SMALLEST_APPARENT_POWER:
-        return MISSING
-    if active.is_known and apparent.is_known:
-        value = active.value / apparent.value
-        standard = math.hypot(active.standard, value * apparent.standard) / apparent.value
-        return Measured(min(1.0, max(-1.0, value)), standard)
-    return MISSING if math.isnan(told) else Measured(told)
-
-
 def _legs(plan: Plan, sample: Sample) -> Mapping[str, Power]:
     """Return each leg's current, and its power where a channel stands from it to N; the first that answers counts."""
     legs: dict[str, Power] = dict.fromkeys(LEGS, NO_POWER)
@@ -209,7 +137,7 @@ def _legs(plan: Plan, sample: Sample) -> Mapping[str, Power]:
         known = legs[leg]
         if known.current.is_known and (known.active.is_known or not channel.gives_leg_power):
             continue
-        power = _power(sample, channel)
+        power = power_of(sample, channel)
         if channel.gives_leg_power:
             legs[leg] = power
         elif power.current.is_known and not known.current.is_known:
@@ -218,25 +146,21 @@ def _legs(plan: Plan, sample: Sample) -> Mapping[str, Power]:
 
 
 def _first_current(sample: Sample, channels: tuple[ChannelPlan, ...]) -> Measured:
-    return next((power.current for channel in channels if (power := _power(sample, channel)).current.is_known), MISSING)
-
-
-def _sum(values: Iterable[Measured]) -> Measured:
-    """Return the sum of values with independent errors; missing where one is."""
-    known = tuple(values)
-    return Measured(sum(value.value for value in known), math.hypot(*(value.standard for value in known)))
+    return next(
+        (power.current for channel in channels if (power := power_of(sample, channel)).current.is_known), MISSING
+    )
 
 
 def _total(plan: Plan, sample: Sample, legs: Mapping[str, Power]) -> Power:
     """Return power towards the machines: the sum of three legs, or of two wattmeters with a common leg."""
-    active = _sum(legs[leg].active for leg in LEGS)
+    active = sum_of(legs[leg].active for leg in LEGS)
     if active.is_known or not plan.two_wattmeters:
-        return Power(active=active, reactive=_sum(legs[leg].reactive for leg in LEGS))
+        return Power(active=active, reactive=sum_of(legs[leg].reactive for leg in LEGS))
     for pair in plan.two_wattmeters:
-        powers = (_power(sample, pair.first), _power(sample, pair.second))
-        active = _sum(power.active for power in powers)
+        powers = (power_of(sample, pair.first), power_of(sample, pair.second))
+        active = sum_of(power.active for power in powers)
         if active.is_known:
-            return Power(active=active, reactive=_sum(power.reactive for power in powers))
+            return Power(active=active, reactive=sum_of(power.reactive for power in powers))
     return NO_POWER
 
 
@@ -245,27 +169,23 @@ def _supply(plan: Plan, sample: Sample, voltages: Mapping[str, Measured]) -> Pow
     powers = [
         power
         for channel in plan.supply_channels
-        if (power := _power(sample, channel)).voltage.is_known or power.current.is_known
+        if (power := power_of(sample, channel)).voltage.is_known or power.current.is_known
     ]
     voltage = _supply_voltage(plan, voltages)
     if not powers:
         return Power(voltage=voltage)
     if len(powers) < sum(channel.through is not None for channel in plan.supply_channels):
-        return Power(voltage=voltage, current=_largest(power.current for power in powers))
-    active = _sum(power.active for power in powers)
-    apparent = _sum(power.apparent for power in powers)
+        return Power(voltage=voltage, current=largest_of(power.current for power in powers))
+    active = sum_of(power.active for power in powers)
+    apparent = sum_of(power.apparent for power in powers)
     return Power(
         voltage=voltage,
-        current=_largest(power.current for power in powers),
+        current=largest_of(power.current for power in powers),
         active=active,
-        reactive=_sum(power.reactive for power in powers),
+        reactive=sum_of(power.reactive for power in powers),
         apparent=apparent,
         factor=power_factor(active, apparent, powers[0].factor.value if len(powers) == 1 else NAN),
     )
-
-
-def _largest(values: Iterable[Measured]) -> Measured:
-    return max((value for value in values if value.is_known), key=lambda value: value.value, default=MISSING)
 
 
 def _supply_voltage(plan: Plan, voltages: Mapping[str, Measured]) -> Measured:
@@ -274,7 +194,7 @@ def _supply_voltage(plan: Plan, voltages: Mapping[str, Measured]) -> Measured:
     if measured.is_known or plan.feed.neutral != "centre-tap":
         return measured
     first, second = plan.feed.supply_legs
-    return _sum((voltages.get(f"{first}-N", MISSING), voltages.get(f"{second}-N", MISSING)))
+    return sum_of((voltages.get(f"{first}-N", MISSING), voltages.get(f"{second}-N", MISSING)))
 
 
 def _together(sample: Sample, channels: tuple[ChannelPlan, ...]) -> Power:
@@ -283,15 +203,15 @@ def _together(sample: Sample, channels: tuple[ChannelPlan, ...]) -> Power:
     The voltage is the first channel's, the current the largest; powers add up over channels to N, or over two channels
     with a common leg, and are those of the one channel where there is one.
     """
-    powers = [_power(sample, channel) for channel in channels]
+    powers = [power_of(sample, channel) for channel in channels]
     if len(powers) == 1:
         return powers[0]
     adds_up = all(channel.gives_leg_power for channel in channels) or _is_two_wattmeters(channels)
-    active = _sum(power.active for power in powers) if adds_up else MISSING
-    apparent = _sum(power.apparent for power in powers) if adds_up and len(powers) == 3 else MISSING
+    active = sum_of(power.active for power in powers) if adds_up else MISSING
+    apparent = sum_of(power.apparent for power in powers) if adds_up and len(powers) == 3 else MISSING
     return Power(
         voltage=next((power.voltage for power in powers if power.voltage.is_known), MISSING),
-        current=_largest(power.current for power in powers),
+        current=largest_of(power.current for power in powers),
         active=active,
         apparent=apparent,
         factor=power_factor(active, apparent),
@@ -310,10 +230,10 @@ def _is_two_wattmeters(channels: tuple[ChannelPlan, ...]) -> bool:
 def _frequency(plan: Plan, sample: Sample) -> Measured:
     """Return the first frequency whose meter sees a fifth of its voltage at least, the supply's meter before others."""
     for channel in (*plan.supply_channels, *plan.distances):
-        value = _value(sample, channel.meter, (0, "frequency"))
+        value = value_of(sample, channel.meter, (0, "frequency"))
         if math.isnan(value):
-            value = _value(sample, channel.meter, (channel.channel, "frequency"))
-        if not math.isnan(value) and _voltage(sample, channel) >= 0.2 * plan.nominal.get(channel.pair, NAN):
+            value = value_of(sample, channel.meter, (channel.channel, "frequency"))
+        if not math.isnan(value) and voltage_of(sample, channel) >= 0.2 * plan.nominal.get(channel.pair, NAN):
             return Measured(value)
     return MISSING
 
@@ -321,13 +241,13 @@ def _frequency(plan: Plan, sample: Sample) -> Measured:
 def _energy(plan: Plan, sample: Sample) -> float:
     """Return the energy counted into the converter. [J]"""
     energies = [
-        _value(sample, channel.meter, (channel.channel, "active_energy_import")) * channel.ratio
+        value_of(sample, channel.meter, (channel.channel, "active_energy_import")) * channel.ratio
         for channel in plan.supply_channels
         if channel.through is not None
     ]
     if energies and math.isnan(sum(energies)):
         whole = plan.supply_channels[0]
-        return _value(sample, whole.meter, (0, "active_energy_import")) * whole.ratio
+        return value_of(sample, whole.meter, (0, "active_energy_import")) * whole.ratio
     return sum(energies) if energies else NAN
 
 

@@ -24,7 +24,8 @@ from idlerwatch.core.conductors import CONDUCTORS, EARTH_PAIRS, LINE_PAIRS, NEUT
 from idlerwatch.core.converter.conductor_map import fit_conductors
 from idlerwatch.core.electrical.sequence import sequence_components
 from idlerwatch.core.values import Known
-from idlerwatch.core.watch.derive import MISSING, Derived, Measured
+from idlerwatch.core.watch.channel import MISSING, Measured
+from idlerwatch.core.watch.derive import Derived
 from idlerwatch.core.watch.plan import Plan
 
 Floats = npt.NDArray[np.float64]

@@ -30,7 +30,7 @@ Finding = Literal["still", "coasting", "surging", "humming", "rising", "between"
 ========== ===========================================================================
 still      no supply current; generated legs dead, or their meters silent
 coasting   no supply current, yet generated legs carry voltage
-surging    a start's current; generated legs not up, or their meters silent
+surging    a start's current, whatever the legs read (a start capacitor lifts one at standstill)
 humming    the supply's current flows; generated legs dead
 rising     the supply's current flows; generated legs between dead and up
 between    generated legs between dead and up; supply current not known
@@ -188,20 +188,14 @@ def find(plan: Plan, state: LifeState, evidence: Evidence) -> Finding:
         return "coasting" if evidence.generated >= DEAD else "still"
     if math.isnan(evidence.current):
         return _by_voltages(evidence)
+    if evidence.current >= plan.levels.surge:
+        return "surging"
     if math.isnan(evidence.generated):
-        return _by_current_alone(plan, evidence)
+        # where the legs have no meter at all the current alone must do
+        return "unseen" if plan.watches_generated else "turning"
     if evidence.generated >= UP:
         return "turning"
-    if evidence.current >= plan.levels.surge:
-        return "surging"
     return "rising" if evidence.generated >= DEAD else "humming"
-
-
-def _by_current_alone(plan: Plan, evidence: Evidence) -> Finding:
-    """Return the finding where the legs are silent, or have no meter at all: then the current alone must do."""
-    if evidence.current >= plan.levels.surge:
-        return "surging"
-    return "unseen" if plan.watches_generated else "turning"
 
 
 def _by_voltages(evidence: Evidence) -> Finding:
@@ -323,7 +317,7 @@ def _or(value: float, otherwise: float) -> float:
 def _starts(plan: Plan, state: LifeState, evidence: Evidence) -> bool:
     """Return whether currents stand a machine's starting current above what they were before."""
     if not math.isnan(evidence.leg_current):
-        return evidence.leg_current - _or(state.usual_leg_current, 0.0) >= plan.levels.machine_surge
+        return evidence.leg_current - _or(state.usual_leg_current, evidence.leg_current) >= plan.levels.machine_surge
     if evidence.current >= plan.levels.surge:
         return True
     step = evidence.current - _or(state.usual_supply_current, evidence.current)

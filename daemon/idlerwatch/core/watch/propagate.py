@@ -15,7 +15,7 @@ from collections.abc import Callable
 import numpy as np
 import numpy.typing as npt
 
-from idlerwatch.core.watch.derive import MISSING, Measured
+from idlerwatch.core.watch.channel import MISSING, Measured
 
 Floats = npt.NDArray[np.float64]
 
@@ -25,11 +25,15 @@ def propagate(function: Callable[[Floats], Floats], inputs: tuple[Measured, ...]
 
     `function` takes (..., n) and gives (...).
     """
-    values = np.array([measured.value for measured in inputs])
-    if math.isnan(sum(values.tolist())):
+    values = [measured.value for measured in inputs]
+    if math.isnan(sum(values)):
         return MISSING
-    moved = np.vstack([values, values + np.diag([measured.standard for measured in inputs])])
-    first, *others = np.asarray(function(moved)).tolist()
+    moved = [values]
+    for index, measured in enumerate(inputs):
+        row = values.copy()
+        row[index] += measured.standard
+        moved.append(row)
+    first, *others = function(np.array(moved)).tolist()
     if math.isnan(first):
         return MISSING
     return Measured(first, math.sqrt(sum((other - first) ** 2 for other in others if not math.isnan(other))))

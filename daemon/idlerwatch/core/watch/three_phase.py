@@ -22,7 +22,8 @@ from idlerwatch.core.electrical.unbalance import (
     line_voltage_unbalance_rate,
     phase_voltage_unbalance_rate,
 )
-from idlerwatch.core.watch.derive import MISSING, Derived, Measured
+from idlerwatch.core.watch.channel import MISSING, Measured
+from idlerwatch.core.watch.derive import Derived
 from idlerwatch.core.watch.estimate import Estimate
 from idlerwatch.core.watch.plan import Plan
 from idlerwatch.core.watch.propagate import propagate

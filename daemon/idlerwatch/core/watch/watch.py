@@ -15,8 +15,11 @@ from dataclasses import dataclass, replace
 from idlerwatch.core.settings.model import Settings
 from idlerwatch.core.values import (
     Acknowledge,
+    CycleEnd,
     Input,
+    MeterSilent,
     Output,
+    Reading,
     Sample,
     Shelve,
     StandingAlarm,
@@ -62,11 +65,13 @@ class Watch:
 
     def take(self, event: Input) -> tuple["Watch", tuple[Output, ...]]:
         """Take one input; a cycle's end gives an assessment, then alarm events, then rows of closed windows."""
-        if isinstance(event, (Acknowledge, Shelve, Trouble)):
-            return replace(self, told=(*self.told, event)), ()
-        align, sample = step(self.align, event)
-        watch = replace(self, align=align)
-        return (watch, ()) if sample is None else _judge(watch, sample)
+        match event:
+            case Reading() | MeterSilent() | CycleEnd():
+                align, sample = step(self.align, event)
+                watch = Watch(self.plan, align, self.life, self.alarms, self.windows, self.told, self.rows)
+                return (watch, ()) if sample is None else _judge(watch, sample)
+            case Acknowledge() | Shelve() | Trouble():
+                return replace(self, told=(*self.told, event)), ()
 
 
 def _judge(watch: Watch, sample: Sample) -> tuple[Watch, tuple[Output, ...]]:
