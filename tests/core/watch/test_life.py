@@ -90,6 +90,39 @@ def test_a_supply_current_without_watched_legs_is_never_called_stopped(state):
     assert TABLE[state]["nothing"] == "blind"
 
 
+FOUND = {
+    "still": stopped(),
+    "coasting": COASTING,
+    "surging": STARTING,
+    "humming": running(supply=supply_says(current=5.0), leg_2=said(1.0), leg_3=said(2.0)),
+    "rising": SLOW_STARTING,
+    "between": running(**NO_SUPPLY_METER, leg_2=said(100.0), leg_3=said(90.0)),
+    "turning": running(),
+    "unseen": running(**SILENT),
+    "nothing": dict.fromkeys(running(), "no answer"),
+}
+
+
+@pytest.mark.parametrize("finding", FINDINGS)
+@pytest.mark.parametrize("state", STATES)
+def test_the_state_follows_the_table_once_the_finding_is_confirmed_and_not_before(state, finding):
+    plan = compile_plan(slipway())
+    align, life = begin_align(plan.slow), LifeState(state=state, since=0.0)
+    wanted, told = TABLE[state][finding], []
+    for event in cycles((CONFIRMATIONS[finding], FOUND[finding]), start=1.0):
+        align, sample = step(align, event)
+        if sample is not None:
+            derived = derive(plan, sample)
+            life = judge_life(plan, life, sample.at, derived)
+            assert life.finding == finding
+            told.append(life.state)
+    assert told[-1] == wanted
+    changes = [following for following in told if following != state]
+    assert set(changes) <= {wanted}
+    if finding not in ("surging", "turning", "rising"):  # those have two witnesses in one sample
+        assert len(changes) <= 1
+
+
 # --------------------------------------------------------------------------
 # Findings, both sides of each threshold
 # --------------------------------------------------------------------------

@@ -23,6 +23,7 @@ import numpy.typing as npt
 from idlerwatch.core.conductors import CONDUCTORS, EARTH_PAIRS, LINE_PAIRS, NEUTRAL_PAIRS, Conductor, Pair
 from idlerwatch.core.converter.conductor_map import fit_conductors
 from idlerwatch.core.electrical.sequence import sequence_components
+from idlerwatch.core.electrical.uncertainty import CHI_SQUARE_999
 from idlerwatch.core.values import Known
 from idlerwatch.core.watch.channel import MISSING, Measured
 from idlerwatch.core.watch.derive import Derived
@@ -35,8 +36,6 @@ Told = tuple[Measured, Known]
 NOT_TOLD: Final[Told] = (MISSING, "not measured")
 STANDING_STILL: Final = 0.2
 """Below this height of the generated legs nothing is mapped."""
-CHI_SQUARE: Final = (math.inf, 10.83, 13.82, 16.27, 18.47, 20.52, 22.46, 24.32, 26.12, 27.88, 29.59)
-"""The 0.999 quantiles of chi-square for 1 to 10 degrees of freedom (standard table)."""
 GROSS: Final = 25.0
 """With one distance to spare nobody can say which is wrong: beyond five times its limit nothing is told."""
 
@@ -94,7 +93,7 @@ class _Fit:
     @property
     def limit(self) -> float:
         """The chi-square that is still believed."""
-        return CHI_SQUARE[min(self.spare, len(CHI_SQUARE) - 1)]
+        return CHI_SQUARE_999[min(self.spare, len(CHI_SQUARE_999) - 1)]
 
     @property
     def is_believed(self) -> bool:
@@ -182,7 +181,7 @@ def _mapped(plan: Plan, plain: Estimate, distances: _Distances) -> Estimate:
         rest = _fit(plan, distances.without(fit.misfit))
         if rest.is_believed:
             return replace(_with_points(plan, plain, rest), remarks=(f"{worst}: left out of the angles",))
-    elif fit.chi_square <= GROSS * fit.limit:
+    elif fit.spare == 1 and fit.chi_square <= GROSS * fit.limit:
         return replace(_with_points(plan, plain, fit), remarks=(worst,))
     return replace(plain, remarks=(f"{worst}: no angles from these",))
 
