@@ -23,7 +23,7 @@ from typing import Final, Literal
 import numpy as np
 import numpy.typing as npt
 
-from idlerwatch.core.values import Assessment, Figure, WindowRow
+from idlerwatch.core.values import UNKNOWN, Assessment, Figure, WindowRow
 
 Floats = npt.NDArray[np.float64]
 FigureName = tuple[str, str, str]
@@ -122,8 +122,7 @@ def _close(state: WindowsState, start: float) -> tuple[WindowsState, tuple[Windo
 
 def summarise(state: WindowsState) -> Summary:
     """Return the summary of the open 10 s window."""
-    names = _all_names(state.figures)
-    values = np.array([[_value(figures, name) for name in names] for figures in state.figures])
+    names, values = _table(state.figures)
     present = ~np.isnan(values)
     filled = np.where(present, values, 0.0)
     return Summary(
@@ -142,16 +141,13 @@ def summarise(state: WindowsState) -> Summary:
     )
 
 
-def _all_names(figures: tuple[Mapping[FigureName, Figure], ...]) -> tuple[FigureName, ...]:
-    first = figures[0].keys()
-    if all(each.keys() == first for each in figures):
-        return tuple(first)
-    return tuple(dict.fromkeys(name for each in figures for name in each))
-
-
-def _value(figures: Mapping[FigureName, Figure], name: FigureName) -> float:
-    figure = figures.get(name)
-    return math.nan if figure is None else figure.value
+def _table(figures: tuple[Mapping[FigureName, Figure], ...]) -> tuple[tuple[FigureName, ...], Floats]:
+    """Return the names of all figures and their values, a row a sample; usually every sample has the same names."""
+    names = tuple(figures[0])
+    if all(tuple(each) == names for each in figures[1:]):
+        return names, np.array([[figure.value for figure in each.values()] for each in figures])
+    names = tuple(dict.fromkeys(name for each in figures for name in each))
+    return names, np.array([[each.get(name, UNKNOWN).value for name in names] for each in figures])
 
 
 def _last(values: Floats) -> Floats:
