@@ -22,6 +22,7 @@ PairField = Annotated[Pair, BeforeValidator(_pair), PlainSerializer(str)]
 Name = Annotated[str, Field(pattern=r"^[a-z0-9][a-z0-9-]*$|^[A-Z][A-Za-z0-9]*$", max_length=40)]
 Positive = Annotated[float, Field(gt=0)]
 NotNegative = Annotated[float, Field(ge=0)]
+PriorityWhen = Literal["S", "A", "C", "U", "M", "L", "D", "B", "W", "machines", "generator"]
 
 
 class Table(BaseModel):
@@ -214,7 +215,9 @@ class Alarm(Table):
 
     `watches` names the condition in the core that computes the value; `setpoint` and `deadband` are in `unit`
     (voltages as ratios of nominal). `suppressed_in` are letters of the state table: S stopped, A starting,
-    C change-over, U running unloaded, M machine starting, L loaded, D run-down, B blind, W at work.
+    C change-over, U running unloaded, M machine starting, L loaded, D run-down, B blind, W at work. `priority_when`
+    gives another priority in such a state, with `machines` that ran in the last 10 s, or on a `generator`; the highest
+    that applies counts.
     """
 
     tag: Name
@@ -225,6 +228,7 @@ class Alarm(Table):
     on_delay_s: NotNegative = 0.0
     off_delay_s: NotNegative = 0.0
     priority: Priority
+    priority_when: Mapping[PriorityWhen, Priority] = Field(default_factory=dict)
     suppressed_in: tuple[Literal["S", "A", "C", "U", "M", "L", "D", "B", "W"], ...] = ()
     explains: tuple[str, ...] = ()
     needs_acknowledgement: bool = False
