@@ -200,6 +200,9 @@ class StandingAlarm:
     text: str
     cause: str
     advice: str
+    transitions: int = 0
+    """Transitions of this occurrence so far: the n of the last event's identity, kept so that it goes on counting
+    after a restart."""
 
 
 @dataclass(frozen=True, slots=True)
