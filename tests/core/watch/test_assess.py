@@ -4,6 +4,7 @@ import pytest
 
 from fakes.sheds import (
     L1_N,
+    LEG_METERS,
     SUPPLY_METER,
     THREE_PHASE,
     build,
@@ -11,6 +12,7 @@ from fakes.sheds import (
     cycle,
     meter,
     numbered,
+    numbered_lines,
     running,
     said,
     slipway,
@@ -151,7 +153,7 @@ def test_a_hand_tuned_converter_for_every_assignment_of_its_line_voltages(lines)
     told = assessed(slipway_lines(), six((239.0, 246.0, 244.0), lines))
     assert value(told, "converter", "converter", "phase_voltage_unbalance_rate") == pytest.approx(0.0165, abs=5e-5)
     assert 0.0230 <= value(told, "converter", "converter", "voltage_unbalance_factor") <= 0.0234
-    assert not any("does not fit" in remark for remark in told.remarks)
+    assert not any("fit" in remark or "contradict" in remark for remark in told.remarks)
     mean = (416.0 + 419.0 + 432.0) / 3.0
     rate = value(told, "converter", "converter", "line_voltage_unbalance_rate")
     assert rate == pytest.approx((432.0 - mean) / mean)
@@ -159,14 +161,43 @@ def test_a_hand_tuned_converter_for_every_assignment_of_its_line_voltages(lines)
     assert value(told, "converter", "converter", "added_temperature_rise") == pytest.approx(2.0 * rate**2 * 100.0)
 
 
-def test_the_voltmeter_that_does_not_fit_is_named():
+def doubled(**changed):
+    """The three-phase meter and, on the same three pairs to N, three meters of their own."""
+    legs = {f"leg-{k}": said(230.0, 0.0, 0.0, 0.0) for k in (1, 2, 3)}
+    return PERFECT | legs | {name.replace("_", "-"): values for name, values in changed.items()}
+
+
+def test_the_voltmeter_that_does_not_fit_is_named_and_left_out():
+    told = assessed(slipway_lines(*LEG_METERS), doubled(leg_3=said(260.0)))
+    assert "leg-3's L3-N does not fit the other voltages and is left out" in told.remarks
+    assert value(told, "converter", "converter", "voltage_unbalance_factor") == pytest.approx(0.0, abs=1e-6)
+    leg = told.leg("L3", "voltage")
+    assert (leg.value, leg.known) == (pytest.approx(230.0), "mapped")
+
+
+def test_where_several_may_be_wrong_all_are_named():
+    # one distance to spare: any of five may be the wrong one; only the doubled L1-N is above suspicion
+    told = assessed(slipway_lines(), six((230.0, 230.0, 238.0), (230.0 * math.sqrt(3.0),) * 3))
+    (remark,) = (remark for remark in told.remarks if "contradict" in remark)
+    assert "legs's L3-N" in remark
+    assert "supply's L1-N" not in remark
+    assert told.figure("converter", "converter", "voltage_unbalance_factor").is_known
+
+
+def test_a_gross_contradiction_that_several_may_explain_tells_no_unbalance():
     told = assessed(slipway_lines(), six((230.0, 230.0, 260.0), (230.0 * math.sqrt(3.0),) * 3))
-    assert any("L3-N" in remark for remark in told.remarks)
+    assert any("contradict" in remark for remark in told.remarks)
+    for quantity in ("voltage_unbalance_factor", "line_voltage_unbalance_rate", "derating_factor"):
+        assert not told.figure("converter", "converter", quantity).is_known
+    assert told.leg("L3", "voltage").value == 260.0
 
 
-def test_lines_that_close_no_triangle_give_no_unbalance_factor():
-    told = assessed(slipway_lines(), six((230.0, 230.0, 230.0), (100.0, 100.0, 398.0)))
-    assert not told.figure("converter", "converter", "voltage_unbalance_factor").is_known
+def test_lines_that_close_no_triangle_give_no_unbalance():
+    said_lines = numbered_lines(100.0, 100.0, 240.0)
+    told = assessed(split_phase(), split_running() | {"lines": said_lines}, samples=1)
+    assert told.angles == "not seen"
+    for quantity in ("voltage_unbalance_factor", "line_voltage_unbalance_rate"):
+        assert not told.figure("converter", "converter", quantity).is_known
 
 
 def test_a_centre_tapped_supply_is_told_no_phase_voltage_unbalance():

@@ -17,7 +17,7 @@ from idlerwatch.core.values import UNKNOWN, Assessment, Figure, Known, Sample
 from idlerwatch.core.watch.bank_current import bank_current_ratio
 from idlerwatch.core.watch.channel import MISSING, Measured, power_factor
 from idlerwatch.core.watch.derive import Derived
-from idlerwatch.core.watch.estimate import STANDING_STILL, Estimate
+from idlerwatch.core.watch.estimate import Estimate, stands_still
 from idlerwatch.core.watch.life import LifeState
 from idlerwatch.core.watch.plan import Plan
 from idlerwatch.core.watch.three_phase import (
@@ -160,10 +160,11 @@ def _voltages(plan: Plan, estimate: Estimate, pair: str, supply_ratio: Measured)
 
 
 def _unbalances(plan: Plan, derived: Derived, estimate: Estimate) -> Iterator[Row]:
-    stands_still = derived.generated < STANDING_STILL
-    line = MISSING if stands_still else line_unbalance(tuple(estimate.voltages[pair][0] for pair in LINES))
-    legs = MISSING
-    if plan.has_central_neutral and not stands_still:
+    is_still = stands_still(plan, derived)
+    line, legs = MISSING, MISSING
+    if not is_still and not estimate.contradicted:
+        line = line_unbalance(tuple(estimate.voltages[pair][0] for pair in LINES))
+    if not is_still and plan.has_central_neutral:
         legs = phase_unbalance(tuple(estimate.voltages[f"{leg}-N"][0] for leg in LEGS))
     known = estimate.known
     zero, positive, negative = estimate.components
@@ -243,7 +244,7 @@ EARTH_NOT_MEASURED: Final = "neutral-to-earth voltage is not measured"
 
 
 def _remarks(plan: Plan, derived: Derived, estimate: Estimate) -> Iterator[str]:
-    if estimate.angles == "not seen" and not derived.generated < STANDING_STILL:
+    if estimate.angles == "not seen" and not estimate.contradicted and not stands_still(plan, derived):
         yield NOT_SEEN
     if not estimate.neutral_earth[0].is_known:
         yield EARTH_NOT_MEASURED

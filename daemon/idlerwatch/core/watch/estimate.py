@@ -7,13 +7,14 @@ by its standard uncertainty: correlations between the results are then right by 
 
 * Three line voltages, or five different pairs, show the angles: they are *measured*. Magnitudes to neutral alone do
   not, and then there is no unbalance factor and no line voltage: unknown, never normal.
-* Where the distances contradict each other beyond their uncertainty the one that fits worst is named. With two or more
-  to spare it is left out and the rest is used, if that fits; if nothing fits, nothing is told.
-* While the generated legs carry no voltage there is nothing to map.
+* Where the distances contradict each other beyond their uncertainty, the rest without each of them is tried. If one
+  alone explains it, that voltmeter is named and left out. If several do, with too little to spare to say which, all are
+  named, and what is told is told with that; a gross contradiction, or one that nothing explains, tells nothing.
+* While the supply is gone, or the generated legs carry no voltage, there is nothing to map.
 """
 
 import math
-from collections.abc import Mapping
+from collections.abc import Iterable, Mapping
 from dataclasses import dataclass, replace
 from typing import Final, Literal
 
@@ -35,9 +36,11 @@ Told = tuple[Measured, Known]
 
 NOT_TOLD: Final[Told] = (MISSING, "not measured")
 STANDING_STILL: Final = 0.2
-"""Below this height of the generated legs nothing is mapped."""
-GROSS: Final = 25.0
-"""With one distance to spare nobody can say which is wrong: beyond five times its limit nothing is told."""
+"""Below this height of the generated legs, or ratio of the supply's voltage, nothing is mapped."""
+LARGEST_VOLTAGE: Final = 1e5
+"""Beyond this a reading is no voltage. [V]"""
+GROSS: Final = 9.0
+"""Where nobody can say which distance is wrong: beyond nine times the limit nothing is told."""
 
 _NUMBER: Final[Mapping[Conductor, int]] = {conductor: index for index, conductor in enumerate(CONDUCTORS)}
 _PAIRS: Final = (*LINE_PAIRS, *NEUTRAL_PAIRS)
@@ -48,7 +51,8 @@ class Estimate:
     """What geometry makes of one sample.
 
     `voltages` holds every line and leg-to-neutral pair, measured or mapped; `components` V0, V1, V2; `known` says how
-    what rests on line voltages is known; `points` is empty where angles were not seen.
+    what rests on line voltages is known; there are no `points` where angles were not seen. `contradicted` says that the
+    measured voltages cannot all be right.
     """
 
     angles: Literal["measured", "not seen"]
@@ -58,6 +62,7 @@ class Estimate:
     unbalance_factor: Measured = MISSING
     neutral_earth: Told = NOT_TOLD
     points: Mapping[Conductor, complex] | None = None
+    contradicted: bool = False
     remarks: tuple[str, ...] = ()
 
 
@@ -70,15 +75,9 @@ class _Distances:
     values: Floats
     standards: Floats
 
-    def without(self, index: int) -> "_Distances":
-        """Return all distances but one."""
-        keep = [position for position in range(len(self.pairs)) if position != index]
-        return _Distances(
-            tuple(self.pairs[position] for position in keep),
-            tuple(self.meters[position] for position in keep),
-            self.values[keep],
-            self.standards[keep],
-        )
+    def named(self, index: int) -> str:
+        """Return which voltmeter a distance is."""
+        return f"{self.meters[index]}'s {self.pairs[index]}"
 
 
 @dataclass(frozen=True, slots=True)
@@ -87,13 +86,7 @@ class _Fit:
 
     points: Complexes
     chi_square: float
-    spare: int
-    misfit: int
-
-    @property
-    def limit(self) -> float:
-        """The chi-square that is still believed."""
-        return CHI_SQUARE_999[min(self.spare, len(CHI_SQUARE_999) - 1)]
+    limit: float
 
     @property
     def is_believed(self) -> bool:
@@ -105,9 +98,14 @@ def estimate(plan: Plan, derived: Derived) -> Estimate:
     """Return what geometry makes of one sample's voltages."""
     voltages = _measured_voltages(plan, derived)
     plain = Estimate("not seen", "not measured", voltages, neutral_earth=_measured_earth(plan, derived))
-    if derived.generated < STANDING_STILL or not _shows_angles(voltages, derived.voltages):
+    if stands_still(plan, derived) or not _shows_angles(voltages, derived.voltages):
         return plain
     return _mapped(plan, plain, _distances(plan, derived, voltages))
+
+
+def stands_still(plan: Plan, derived: Derived) -> bool:
+    """Return whether the legs are seen to carry no voltage of three phases."""
+    return derived.generated < STANDING_STILL or derived.supply.voltage.value < STANDING_STILL * plan.feed.voltage
 
 
 def _measured_voltages(plan: Plan, derived: Derived) -> dict[str, Told]:
@@ -136,19 +134,25 @@ def _distances(plan: Plan, derived: Derived, voltages: Mapping[str, Told]) -> _D
             tuple(pair for pair, _ in lines),
             ("",) * len(lines),
             np.array([measured.value for _, measured in lines]),
-            np.array([measured.standard for _, measured in lines]),
+            _at_least(measured.standard for _, measured in lines),
         )
     known = [
         (channel, value)
         for channel, value in zip(plan.distances, derived.distances, strict=True)
-        if not math.isnan(value) and channel.across is not None
+        if value < LARGEST_VOLTAGE and channel.across is not None
     ]
     return _Distances(
         tuple(channel.across for channel, _ in known if channel.across is not None),
         tuple(channel.meter for channel, _ in known),
         np.array([value for _, value in known]),
-        np.array([value * channel.voltage_gain for channel, value in known]),
+        _at_least(value * channel.voltage_gain for channel, value in known),
     )
+
+
+def _at_least(standards: Iterable[float]) -> Floats:
+    """Return standard uncertainties; a reading of zero has no relative one, a millivolt keeps its weight finite."""
+    floored: Floats = np.maximum(np.array(list(standards)), 1e-3)
+    return floored
 
 
 # --------------------------------------------------------------------------
@@ -158,32 +162,48 @@ def _distances(plan: Plan, derived: Derived, voltages: Mapping[str, Told]) -> _D
 
 def _fit(plan: Plan, distances: _Distances) -> _Fit:
     """Fit the sample and, beside it, the sample with each distance moved by its standard uncertainty."""
-    # a reading of zero has no relative error; a millivolt keeps its weight finite
-    standards = np.maximum(distances.standards, 1e-3)
+    standards = distances.standards
     moved = np.vstack([distances.values, distances.values + np.diag(standards)])
     found = fit_conductors(plan.feed, distances.pairs, moved, np.broadcast_to(standards, moved.shape))
-    return _Fit(
-        points=np.asarray(found.points),
-        chi_square=float(np.ravel(found.chi_square)[0]),
-        spare=int(np.ravel(found.degrees_of_freedom)[0]),
-        misfit=int(np.ravel(found.misfit)[0]),
-    )
+    return _Fit(found.points, float(found.chi_square[0]), _limit(int(found.degrees_of_freedom[0])))
+
+
+def _limit(spare: int) -> float:
+    """Return the chi-square that is still believed with so many distances to spare."""
+    return CHI_SQUARE_999[min(spare, len(CHI_SQUARE_999) - 1)]
 
 
 def _mapped(plan: Plan, plain: Estimate, distances: _Distances) -> Estimate:
     fit = _fit(plan, distances)
-    if fit.is_believed:
+    if fit.is_believed or math.isnan(fit.chi_square):
         return _with_points(plan, plain, fit)
-    if fit.misfit < 0 or math.isnan(fit.chi_square):
-        return replace(plain, remarks=(NOTHING_FITS,))
-    worst = f"{distances.meters[fit.misfit]}'s {distances.pairs[fit.misfit]} does not fit the other voltages"
-    if fit.spare > 1:
-        rest = _fit(plan, distances.without(fit.misfit))
-        if rest.is_believed:
-            return replace(_with_points(plan, plain, rest), remarks=(f"{worst}: left out of the angles",))
-    elif fit.spare == 1 and fit.chi_square <= GROSS * fit.limit:
-        return replace(_with_points(plan, plain, fit), remarks=(worst,))
-    return replace(plain, remarks=(f"{worst}: no angles from these",))
+    plain = replace(plain, contradicted=True)
+    suspects = _suspects(plan, distances)
+    if len(suspects) == 1:
+        (wrong,) = suspects
+        rest = distances.values.copy()
+        rest[wrong] = np.nan
+        told = dict(plain.voltages) | {str(distances.pairs[wrong]): NOT_TOLD}
+        fit = _fit(plan, replace(distances, values=rest))
+        remark = f"{distances.named(wrong)} does not fit the other voltages and is left out"
+        return replace(_with_points(plan, replace(plain, voltages=told), fit), contradicted=False, remarks=(remark,))
+    if suspects and fit.chi_square <= GROSS * fit.limit:
+        return replace(_with_points(plan, plain, fit), contradicted=False, remarks=(_one_of(distances, suspects),))
+    return replace(plain, remarks=(_one_of(distances, suspects) if suspects else NOTHING_FITS,))
+
+
+def _suspects(plan: Plan, distances: _Distances) -> tuple[int, ...]:
+    """Return the distances without which the others agree, with something left to spare that could say otherwise."""
+    count = len(distances.pairs)
+    without = np.where(np.eye(count, dtype=bool), np.nan, distances.values)
+    found = fit_conductors(plan.feed, distances.pairs, without, np.broadcast_to(distances.standards, without.shape))
+    results = zip(found.chi_square.tolist(), found.degrees_of_freedom.tolist(), strict=True)
+    return tuple(index for index, (chi_square, spare) in enumerate(results) if chi_square <= _limit(spare))
+
+
+def _one_of(distances: _Distances, suspects: tuple[int, ...]) -> str:
+    names = ", ".join(distances.named(index) for index in suspects)
+    return f"the voltages contradict each other: one of {names} is wrong"
 
 
 NOTHING_FITS: Final = "the voltages contradict each other: no angles from these"
