@@ -61,7 +61,7 @@ class Server:
 
     def start(self) -> "Server":
         with self._log.open("ab") as log:
-            self.process = subprocess.Popen(self.command, stdout=log, stderr=log)  # noqa: S603
+            self.process = subprocess.Popen(self.command, stdout=log, stderr=log)
         wait_until(lambda: is_listening(self.port) or self.process.poll() is not None, what="a listening server")
         assert self.process.poll() is None, self._log.read_text()
         return self
@@ -144,7 +144,7 @@ class InfluxWithShim(Server):
 
     def start(self) -> "InfluxWithShim":
         super().start()
-        wait_until(lambda: self._pings(), what="an influxd that answers")
+        wait_until(self._pings, what="an influxd that answers")
         self.query(f"CREATE DATABASE {self.database}", post=True)
         self._door = ThreadingHTTPServer(("127.0.0.1", 0), _door_to(self))
         threading.Thread(target=self._door.serve_forever, daemon=True).start()
