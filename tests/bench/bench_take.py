@@ -20,7 +20,6 @@ from fakes.sheds import (  # the tests' path is set above
     cycle,
     running,
     said,
-    slipway,
     slipway_lines,
     split_phase,
     split_running,
@@ -28,6 +27,7 @@ from fakes.sheds import (  # the tests' path is set above
 )
 from idlerwatch.core.values import CycleEnd
 from idlerwatch.core.watch.watch import Watch
+from idlerwatch.edges.files import config_directory, load_settings
 
 BUDGET_S = 1e-3
 CYCLES = 3000
@@ -41,14 +41,31 @@ def six_voltages():
     return {"supply": supply_says(current=22.0, power=3000.0), "legs": lines | powers, "earth": said(1.5)}
 
 
+def example():
+    """The shipped example: supply, three leg meters, transducer, bank ammeter, and the whole alarm list."""
+    return load_settings(config_directory() / "example.toml")
+
+
+def renamed(meters):
+    return {name.replace("leg-", "leg"): values for name, values in meters.items()}
+
+
+def with_alarms(settings):
+    return settings.model_copy(update={"alarms": example().alarms})
+
+
+def loaded():
+    return running(**{f"leg_{k}": said(229.0 + k, 5.0, 800.0, 700.0) for k in (1, 2, 3)})
+
+
 INSTALLATIONS = {
-    "six meters, magnitudes to N": (slipway(), running()),
-    "three meters, six voltages": (slipway_lines(), six_voltages()),
+    "the example, six meters": (example(), renamed(loaded())),
+    "three meters, six voltages": (with_alarms(slipway_lines()), six_voltages()),
     "six meters, six voltages": (
-        slipway_lines(*LEG_METERS),
+        with_alarms(slipway_lines(*LEG_METERS)),
         six_voltages() | {f"leg-{k}": said(229.0 + k, 5.0, 800.0, 700.0) for k in (1, 2, 3)},
     ),
-    "two meters, split phase": (split_phase(), split_running()),
+    "two meters, split phase": (with_alarms(split_phase()), split_running()),
 }
 
 
