@@ -67,8 +67,9 @@ def _row(alarm: Alarm, subject: str, lacking: str) -> dict[str, Any]:
 
 
 def _in_force(rows: list[dict[str, Any]]) -> Table:
-    table = Table("alarm", "setpoint", "back", "on", "off", "priority", "not in", box=box.SIMPLE_HEAD)
-    table.columns[0].no_wrap = True
+    table = Table("alarm", "setpoint", "back", "on", "off", "priority", "not in", box=box.SIMPLE_HEAD, pad_edge=False)
+    for column in table.columns[:5]:
+        column.no_wrap = True
     for row in rows:
         table.add_row(*_cells(row))
     return table
