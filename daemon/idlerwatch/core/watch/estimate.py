@@ -2,8 +2,8 @@
 
 Every voltage is a distance between two conductors in the complex plane; the conductor map finds the points
 (`electrical.md` 4). All that follows from them (sequence components, unbalance, voltages nobody measured, neutral to
-earth) gets its uncertainty by fitting, in the same vectorised call, once more for each voltmeter with its reading moved
-by its standard uncertainty: correlations between the results are then right by construction.
+earth) is computed once from the points and once more for each voltmeter, with the points where they stand when its
+reading is moved by its standard uncertainty: the correlations of the results are then right by construction.
 
 * Three line voltages, or five different pairs, show the angles: they are *measured*. Magnitudes to neutral alone do
   not, and then there is no unbalance factor and no line voltage: unknown, never normal.
@@ -21,7 +21,7 @@ from typing import Final, Literal
 import numpy as np
 import numpy.typing as npt
 
-from idlerwatch.core.conductors import CONDUCTORS, EARTH_PAIRS, LINE_PAIRS, NEUTRAL_PAIRS, Conductor, Pair
+from idlerwatch.core.conductors import CONDUCTORS, EARTH_PAIRS, LEGS, LINE_PAIRS, NEUTRAL_PAIRS, Conductor, Pair
 from idlerwatch.core.converter.conductor_map import fit_conductors
 from idlerwatch.core.electrical.sequence import sequence_components
 from idlerwatch.core.electrical.uncertainty import CHI_SQUARE_999
@@ -161,11 +161,10 @@ def _at_least(standards: Iterable[float]) -> Floats:
 
 
 def _fit(plan: Plan, distances: _Distances) -> _Fit:
-    """Fit the sample and, beside it, the sample with each distance moved by its standard uncertainty."""
-    standards = distances.standards
-    moved = np.vstack([distances.values, distances.values + np.diag(standards)])
-    found = fit_conductors(plan.feed, distances.pairs, moved, np.broadcast_to(standards, moved.shape))
-    return _Fit(found.points, float(found.chi_square[0]), _limit(int(found.degrees_of_freedom[0])))
+    """Fit the sample; beside it stand the points with each distance moved by its standard uncertainty."""
+    found = fit_conductors(plan.feed, distances.pairs, distances.values, distances.standards)
+    points = np.concatenate([found.points[None, :], found.points + found.moves])
+    return _Fit(points, float(found.chi_square), _limit(int(found.degrees_of_freedom)))
 
 
 def _limit(spare: int) -> float:
@@ -196,7 +195,7 @@ def _suspects(plan: Plan, distances: _Distances) -> tuple[int, ...]:
     """Return the distances without which the others agree, with something left to spare that could say otherwise."""
     count = len(distances.pairs)
     without = np.where(np.eye(count, dtype=bool), np.nan, distances.values)
-    found = fit_conductors(plan.feed, distances.pairs, without, np.broadcast_to(distances.standards, without.shape))
+    found = fit_conductors(plan.feed, distances.pairs, without, distances.standards)
     results = zip(found.chi_square.tolist(), found.degrees_of_freedom.tolist(), strict=True)
     return tuple(index for index, (chi_square, spare) in enumerate(results) if chi_square <= _limit(spare))
 
@@ -211,8 +210,7 @@ NOTHING_FITS: Final = "the voltages contradict each other: no angles from these"
 
 def _with_points(plan: Plan, plain: Estimate, fit: _Fit) -> Estimate:
     """Return the estimate with everything that follows from the points."""
-    legs = fit.points[:, :3]
-    if np.isnan(legs).any():
+    if np.isnan(fit.points[0, :3]).any():
         return plain
     voltages = {pair: told if told[0].is_known else _distance(fit, pair) for pair, told in plain.voltages.items()}
     components = _components(plan, fit)
@@ -238,11 +236,11 @@ def _with_points(plan: Plan, plain: Estimate, fit: _Fit) -> Estimate:
 
 def _components(plan: Plan, fit: _Fit) -> Complexes:
     """Return V0, V1, V2 along the declared rotation; V0 only where N is nominally the centre of the triangle."""
-    order = [_NUMBER[leg] for leg in plan.rotation]
-    neutral = fit.points[:, 3] if plan.has_central_neutral else np.full(len(fit.points), np.nan + 0j)
-    reference = np.where(np.isnan(neutral), 0.0, neutral)
-    components = np.array(sequence_components(fit.points[:, order] - reference[:, None]))
-    components[np.isnan(neutral), 0] = np.nan
+    legs = fit.points[:, :3] if plan.rotation == LEGS else fit.points[:, [_NUMBER[leg] for leg in plan.rotation]]
+    if plan.has_central_neutral and not np.isnan(fit.points[0, 3]):
+        return sequence_components(legs - fit.points[:, 3:4])
+    components = sequence_components(legs)
+    components[:, 0] = np.nan
     return components
 
 
