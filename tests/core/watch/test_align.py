@@ -146,6 +146,12 @@ def test_a_missing_value_is_never_filled_from_the_reading_before():
     assert math.isnan(sample.values["b"][V])
 
 
+def test_an_infinite_value_is_missing():
+    (sample,) = run(Reading("a", 0.0, {V: math.inf, E: -math.inf}), CycleEnd(0.5))
+    assert math.isnan(sample.values["a"][V])
+    assert math.isnan(sample.values["a"][E])
+
+
 def test_a_step_of_the_wall_clock_leaves_the_durations_alone():
     first, second = run(
         Reading("a", 0.0, {V: 1.0}), CycleEnd(0.5, 1000.0), Reading("a", 1.0, {V: 1.0}), CycleEnd(1.5, 5000.0)

@@ -64,7 +64,16 @@ def step(state: AlignState, event: Input) -> tuple[AlignState, Sample | None]:
 def _note(state: AlignState, event: Reading | MeterSilent) -> AlignState:
     if event.meter not in state.slow_keys or not math.isfinite(event.at):
         return state
-    return AlignState(state.slow_keys, state.before, {**state.now, event.meter: event}, state.slow, state.last_at)
+    noted = _usable(event) if isinstance(event, Reading) else event
+    return AlignState(state.slow_keys, state.before, {**state.now, event.meter: noted}, state.slow, state.last_at)
+
+
+def _usable(reading: Reading) -> Reading:
+    """Return the reading with what is no number (an infinite float among the registers) as missing."""
+    if not any(map(math.isinf, reading.values.values())):
+        return reading
+    values = {key: math.nan if math.isinf(value) else value for key, value in reading.values.items()}
+    return replace(reading, values=values)
 
 
 def _close(state: AlignState, end: CycleEnd) -> tuple[AlignState, Sample]:

@@ -1,4 +1,4 @@
-"""Fourth step: everything a person is told about one sample, figure by figure.
+"""Fifth step: everything a person is told about one sample, figure by figure.
 
 A figure is a value, its expanded uncertainty (k = 2) and how it is known. Every figure the settings make possible is
 always there, unknown where it is not seen: the set of keys never changes, and nothing missing is ever zero.

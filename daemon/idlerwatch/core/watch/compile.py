@@ -171,7 +171,7 @@ def _slow_keys(settings: Settings, meter: Meter) -> frozenset[FigureKey]:
 def _thresholds(settings: Settings, feed: Feed) -> Mapping[str, tuple[str, float]]:
     """Meter -> the pair it lives on and the voltage below which it is asleep.
 
-    Where the settings do not say, a self-powered meter needs about 70 % of its voltage (`practice.md` F1: 160-180 V
+    Where the settings do not say, a self-powered meter needs about 70 % of its voltage (common practice: 160-180 V
     of 230 V).
     """
     return {

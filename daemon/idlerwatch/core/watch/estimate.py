@@ -1,9 +1,9 @@
 """Third step: phasors from magnitudes, where enough distances between the conductors are measured.
 
-Every voltage is a distance between two conductors in the complex plane; the conductor map finds the points
-(`electrical.md` 4). All that follows from them (sequence components, unbalance, voltages nobody measured, neutral to
-earth) is computed once from the points and once more for each voltmeter, with the points where they stand when its
-reading is moved by its standard uncertainty: the correlations of the results are then right by construction.
+Every voltage is a distance between two conductors in the complex plane; the conductor map finds the points. All that
+follows from them (sequence components, unbalance, voltages nobody measured, neutral to earth) is computed once from the
+points and once more for each voltmeter, with the points where they stand when its reading is moved by its standard
+uncertainty: the correlations of the results are then right by construction.
 
 * Three line voltages, or five different pairs, show the angles: they are *measured*. Magnitudes to neutral alone do
   not, and then there is no unbalance factor and no line voltage: unknown, never normal.

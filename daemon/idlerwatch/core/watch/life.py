@@ -1,4 +1,4 @@
-"""Third step: in which state is the converter, and what hangs on it.
+"""Fourth step: in which state is the converter, and what hangs on it.
 
 Each sample is put into one word, a *finding*: first by the supply's current (nothing, flowing, surging), which decides
 between "stopped" and "cable cut"; then by the voltages of the generated legs (dead, between, up); then by which meters
@@ -7,7 +7,7 @@ finding must come as often in a row as `CONFIRMATIONS` says; the change then dat
 
 Where the supply's current flows and the generated legs' meters are silent the converter is unwatched: *blind*, never
 stopped. Where nothing decides it is blind too. After a start or a machine's start, self-powered meters reset and boot
-(`practice.md` F1): their silence is then borne for `PATIENCE_S` and their boot time.
+within seconds: their silence is then borne for `PATIENCE_S` and their boot time.
 
 Levels of current come from the nameplates (`plan.Levels`); once the converter has run, from its own idling current,
 the smallest two successive samples agree on: half of it is flow.
@@ -96,11 +96,11 @@ UP: Final = 0.7
 SUPPLY_GONE: Final = 0.1
 """A supply voltage below this ratio feeds nothing."""
 PATIENCE_S: Final = 15.0
-"""For how long after a surge silent leg meters are borne with (`practice.md` 3, leg-meter-silent: 15 s after M)."""
+"""For how long after a surge silent leg meters are borne with (common practice)."""
 CHANGE_OVER_S: Final = 5.0
 """The longest change-over; what coasts longer runs down."""
 MACHINE_START_S: Final = 30.0
-"""The longest start of a machine (`practice.md` 2, heavy starts)."""
+"""The longest start of a machine (common practice: heavy wheels take up to 15 s)."""
 
 
 @dataclass(frozen=True, slots=True)

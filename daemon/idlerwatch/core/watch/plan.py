@@ -15,7 +15,7 @@ from idlerwatch.core.settings.model import Bank, Machine, Meter
 from idlerwatch.core.values import FigureKey
 
 NOISE: Final = 0.0002
-"""Repeatability of a meter, of reading (`electrical.md` 10: a default, common practice, no source)."""
+"""Repeatability of a meter, of reading (common practice, no source)."""
 
 Place = Literal["supply", "leg", "earth", "contacts", "bank", "machine"]
 
