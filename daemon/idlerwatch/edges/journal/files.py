@@ -1,7 +1,7 @@
 """The files of a journal: how they are named, opened and, when old, unlinked.
 
 A file's name holds the first sequence number in it, so that the order of the names is the order of the records, and
-the week it was begun in, for people. A file may go when the file after it began longer ago than is to be kept.
+the week it was begun in, for people.
 """
 
 import itertools
@@ -91,29 +91,52 @@ def open_for_writing(path: Path, kind: Kind) -> sqlite3.Connection:
     return connection
 
 
-def open_for_reading(path: Path) -> sqlite3.Connection:
-    """Open a file that this thread only reads."""
-    return sqlite3.connect(f"{path.resolve().as_uri()}?mode=ro", uri=True, isolation_level=None, timeout=5.0)
+def open_for_reading(path: Path) -> tuple[sqlite3.Connection, bool]:
+    """Open a file to read it; also return whether the connection will see what is written from now on.
 
-
-def first_stamp(path: Path, kind: Kind) -> float | None:
-    """Return the stamp of the first record in a file, POSIX seconds."""
-    question = "SELECT utc FROM events" if kind == "event" else "SELECT since FROM blocks"
-    connection = open_for_reading(path)
+    To read beside a writer SQLite keeps a small file of its own; where that cannot be made (the disk is full, the
+    reader may not write there) and nothing waits in the write-ahead log, the file is read as it stands.
+    """
+    connection = _open_read_only(path, "mode=ro")
     try:
-        row = connection.execute(f"{question} ORDER BY 1 LIMIT 1").fetchone()
+        connection.execute("SELECT count(*) FROM sqlite_master").fetchone()
+    except sqlite3.OperationalError:
+        connection.close()
+        log = path.with_name(path.name + "-wal")
+        if log.exists() and log.stat().st_size:
+            raise
+        return _open_read_only(path, "immutable=1"), False
+    except sqlite3.DatabaseError:
+        connection.close()
+        raise
+    return connection, True
+
+
+def _open_read_only(path: Path, mode: str) -> sqlite3.Connection:
+    return sqlite3.connect(f"{path.resolve().as_uri()}?{mode}", uri=True, isolation_level=None, timeout=5.0)
+
+
+def stamps(path: Path, kind: Kind) -> tuple[float, float] | None:
+    """Return the stamp of the first record in a file and the latest stamp in it, POSIX seconds; None if it is empty."""
+    first, latest, table = ("utc", "utc", "events") if kind == "event" else ("since", "until", "blocks")
+    connection, _ = open_for_reading(path)
+    try:
+        first_row = connection.execute(f"SELECT {first} FROM {table} ORDER BY rowid LIMIT 1").fetchone()  # noqa: S608
+        latest_row = connection.execute(f"SELECT max({latest}) FROM {table}").fetchone()  # noqa: S608 - fixed words
     finally:
         connection.close()
-    return None if row is None else float(row[0])
+    return None if first_row is None else (float(first_row[0]), float(latest_row[0]))
 
 
 def unlink_old(folder: Path, kind: Kind, keep: Keep, utc: float) -> Sequence[Path]:
-    """Unlink the files whose successor began longer ago than records of the kind are kept."""
+    """Unlink the oldest files, as long as their records and the start of the next file are older than is to be kept.
+
+    Both are asked, since the clock may have been wrong while one of them was begun.
+    """
     gone: list[Path] = []
-    files = list_files(folder, kind)
-    for path, successor in itertools.pairwise(files):
-        began = first_stamp(successor, kind)
-        if began is None or began > utc - keep.days(kind) * _DAY_S:
+    for path, successor in itertools.pairwise(list_files(folder, kind)):
+        own, following = stamps(path, kind), stamps(successor, kind)
+        if own is None or following is None or max(own[1], following[0]) > utc - keep.days(kind) * _DAY_S:
             break
         for part in (path, path.with_name(path.name + "-wal"), path.with_name(path.name + "-shm")):
             with suppress(FileNotFoundError):

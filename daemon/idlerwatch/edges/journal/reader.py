@@ -4,6 +4,7 @@ import json
 import sqlite3
 from collections import deque
 from collections.abc import Callable, Iterator, Sequence
+from itertools import zip_longest
 from pathlib import Path
 from typing import Any, Final
 
@@ -46,7 +47,7 @@ class JournalReader:
         """
         found: list[Record] = []
         files = self._files(kind)
-        for path, successor in zip(files, [*files[1:], None], strict=True):
+        for path, successor in zip_longest(files, files[1:]):
             if len(found) >= limit:
                 return found
             if successor is None or first_of(successor) > after + 1:
@@ -125,16 +126,22 @@ class JournalReader:
         return files
 
     def _ask(self, path: Path, question: str, *values: object) -> list[Any]:
-        if path not in self._open:
-            self._open[path] = open_for_reading(path)
+        connection = self._open.get(path)
         try:
-            return self._open[path].execute(question, values).fetchall()
+            if connection is None:
+                connection, is_live = open_for_reading(path)
+                if is_live:
+                    self._open[path] = connection
+            return connection.execute(question, values).fetchall()
         except sqlite3.OperationalError as error:
             if "no such table" in str(error):  # just being made
                 return []
             raise
         except sqlite3.DatabaseError:  # a spoilt file is passed over, the others still tell
             return []
+        finally:
+            if connection is not None and path not in self._open:
+                connection.close()
 
     def _read_file(self, path: Path, kind: Kind, after: int, limit: int) -> list[Record]:
         if kind == "event":

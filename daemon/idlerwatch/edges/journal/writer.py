@@ -131,6 +131,7 @@ class Journal:
 
     def add_event(self, name: str, body: Mapping[str, Any]) -> int:
         """Commit and sync an event (a JSON-ready body) and return its sequence number."""
+        json.dumps(body, allow_nan=False)  # a body that is none is our mistake: told now, not whenever it is written
         utc = self._utc()
         if not self._events and self._files["event"].ends_before(utc):
             self._add_standing(utc)
@@ -192,7 +193,8 @@ class Journal:
         try:
             has_written = write()
         except (sqlite3.Error, OSError) as error:
-            self._files[kind].close()
+            if getattr(error, "sqlite_errorcode", 0) != sqlite3.SQLITE_FULL:
+                self._files[kind].close()  # else it stays open: readers need what an open file keeps beside it
             self._say(f"the journal in {self.path} cannot be written: {error}")
             return
         if has_written:
