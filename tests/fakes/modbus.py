@@ -5,6 +5,7 @@ import tomllib
 from collections.abc import Mapping
 from dataclasses import dataclass, field
 from pathlib import Path
+from typing import Self
 
 from idlerwatch.core.registers import RegisterKey, RegisterMap, Table, image, read_register_map
 from idlerwatch.core.settings.model import Bus, Channel, Meter
@@ -43,7 +44,7 @@ class Deliveries:
         self._given: queue.Queue[Input | None] = queue.Queue()
         self.thread = BusThread(bus, meters, maps, self._given.put, lambda: self._given.put(None), cycle_s=cycle_s)
 
-    def __enter__(self) -> "Deliveries":
+    def __enter__(self) -> Self:
         self.thread.start()
         return self
 

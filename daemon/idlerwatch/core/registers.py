@@ -14,9 +14,9 @@ scale factor that is absent) or ``implausible`` (outside the map's range).
 
 import math
 import struct
-from collections.abc import Iterable, Mapping
+from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass
-from typing import Annotated, Final, Literal
+from typing import Annotated, Any, Final, Literal
 
 from pydantic import BaseModel, ConfigDict, Field, ValidationError
 
@@ -285,7 +285,7 @@ def read_register_map(name: str, document: Mapping[str, object]) -> RegisterMap:
     try:
         read = _Document.model_validate(document)
     except ValidationError as error:
-        raise SettingsError(tuple(_fault(name, dict(detail)) for detail in error.errors())) from None
+        raise SettingsError(_faults(name, [dict(detail) for detail in error.errors()])) from None
     points = tuple(point for quantity in read.quantity for point in _points(quantity, read.base))
     faults = (*_block_faults(name, read, points), *_double_faults(name, points), *_quantity_faults(name, read))
     if faults:
@@ -301,13 +301,22 @@ def _points(quantity: _Quantity, base: int) -> Iterable[Point]:
         yield Point(quantity.name, channel, address=base + address, scale_address=scale_address, **kept)
 
 
-def _fault(name: str, detail: Mapping[str, object]) -> Fault:
-    place = ".".join(str(part) for part in detail["loc"])  # type: ignore[attr-defined]
+def _faults(name: str, details: Sequence[Mapping[str, Any]]) -> Iterable[Fault]:
+    """Return what is wrong, a list that is too short only for what its parts have wrong left out."""
+    places = [detail["loc"] for detail in details]
+    for detail in details:
+        is_consequence = any(len(place) > len(detail["loc"]) and place[0] == detail["loc"][0] for place in places)
+        if not (detail["type"] == "too_short" and is_consequence):
+            yield _fault(name, detail)
+
+
+def _fault(name: str, detail: Mapping[str, Any]) -> Fault:
+    place = ".".join(str(part) for part in detail["loc"])
     if detail["type"] == "missing":
         return Fault(f"map {name}: {place}", "missing", "must be given")
     if detail["type"] == "extra_forbidden":
         return Fault(f"map {name}: {place}", repr(detail["input"]), "must not be there: no such key")
-    wanted = str(detail["msg"]).removeprefix("Input should ")
+    wanted = str(detail["msg"]).partition(" should ")[2]  # "Input should be ...", "String should match ..."
     return Fault(f"map {name}: {place}", repr(detail["input"]), f"must {wanted}")
 
 

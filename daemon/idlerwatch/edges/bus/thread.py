@@ -17,7 +17,7 @@ from idlerwatch.edges.bus.cycle import Cycle, on_bus
 from idlerwatch.edges.bus.exchange import Master, MeterStatistics
 from idlerwatch.edges.bus.port import PORT_LOST, RtuPort, character_bits, open_port
 
-REOPEN_S: Final = 0.5
+REOPEN_S: Final = 0.25
 """A port that is not there is not tried more often than this."""
 UNPACED_S: Final = 1.0
 """Cycles without a pace (``cycle_s`` 0) may ask again within this."""
