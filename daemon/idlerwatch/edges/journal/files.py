@@ -117,9 +117,17 @@ def _open_read_only(path: Path, mode: str) -> sqlite3.Connection:
 
 
 def stamps(path: Path, kind: Kind) -> tuple[float, float] | None:
-    """Return the stamp of the first record in a file and the latest stamp in it, POSIX seconds; None if it is empty."""
+    """Return the stamp of the first record in a file and the latest stamp in it, POSIX seconds.
+
+    None if it is empty; of a spoilt file, when it was written last.
+    """
     first, latest, table = ("utc", "utc", "events") if kind == "event" else ("since", "until", "blocks")
-    connection, _ = open_for_reading(path)
+    try:
+        connection, _ = open_for_reading(path)
+    except sqlite3.OperationalError:
+        raise
+    except sqlite3.DatabaseError:
+        return path.stat().st_mtime, path.stat().st_mtime
     try:
         first_row = connection.execute(f"SELECT {first} FROM {table} ORDER BY rowid LIMIT 1").fetchone()  # noqa: S608
         latest_row = connection.execute(f"SELECT max({latest}) FROM {table}").fetchone()  # noqa: S608 - fixed words
