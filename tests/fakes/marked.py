@@ -2,7 +2,6 @@
 
 import struct
 from collections import Counter
-from collections.abc import Mapping
 from dataclasses import replace
 
 from fakes.modbus import Deliveries, FakeMeter, bus, meter, shipped_map
@@ -39,7 +38,7 @@ def marked_map() -> RegisterMap:
 
 
 def wrong_values(reading: Reading, slave: int, fresh: range) -> int:
-    """Count values that are another meter's, another register's, or of an answer not in `fresh` (those of this cycle)."""
+    """Count values of another meter, of another register, or of an answer not in `fresh` (those of this cycle)."""
     places = {(point.channel, point.quantity): point.address // 2 for point in marked_map().points}
     numbers = {number % NUMBERS for number in fresh}
     wrong = 0
@@ -52,11 +51,11 @@ def wrong_values(reading: Reading, slave: int, fresh: range) -> int:
 
 
 def poll_through_faults(
-    each: int, share: float, cycle_s: float = 0.3, baudrate: int = 115200
+    each: int, share: float, seed: int = 1, cycle_s: float = 0.15, baudrate: int = 115200
 ) -> tuple[Counter[str], int, int]:
     """Poll four meters until `each` of every fault was made at random points; return the faults, values, wrong ones."""
-    devices: Mapping[int, MarkedMeter] = {address: MarkedMeter(address) for address in (1, 2, 3, 4)}
-    line = Line(devices, baudrate, faults=Faults(*(share,) * len(FAULT_KINDS)))
+    devices = {address: MarkedMeter(address) for address in (1, 2, 3, 4)}
+    line = Line(devices, baudrate, faults=Faults(*(share,) * len(FAULT_KINDS)), seed=seed)
     line.start()
     meters = [meter(f"m{address}", address) for address in devices]
     passed = wrong = 0

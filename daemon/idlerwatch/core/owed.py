@@ -9,7 +9,7 @@ Also how long a meter is waited for: its own measured answer delay decides.
 """
 
 from collections.abc import Iterable
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 from typing import Final
 
 from idlerwatch.core.frames import Shape
@@ -19,6 +19,8 @@ LATEST_S: Final = 1.25
 FIRST_PATIENCE_S: Final = 0.3
 LEAST_PATIENCE_S: Final = 0.12
 MOST_PATIENCE_S: Final = 1.0
+SPARE_S: Final = 0.05
+"""What adapters and schedulers may add to any answer."""
 QUIET_S: Final = 0.03
 """Adapters hand over what they received every 16 ms: less quiet than this proves nothing."""
 MOST_QUIET_S: Final = 0.3
@@ -48,23 +50,34 @@ def oldest(owed: Iterable[Owed], shape: Shape) -> Owed | None:
 
 @dataclass(frozen=True, slots=True)
 class Patience:
-    """How slow a meter was lately: its last answer delay, and the worst, slowly forgotten. NaN-free: 0 is unknown."""
+    """How slow a meter was lately: smoothed answer delay and its smoothed deviation, as TCP does for round trips.
+
+    One late answer among many widens the limit for a few answers only; a meter that is always slow moves it for good.
+
+    References
+    ----------
+    V. Jacobson, *Congestion Avoidance and Control* (1988), appendix A: gains 1/8 and 1/4, four deviations.
+    """
 
     last_s: float = 0.0
-    worst_s: float = 0.0
+    mean_s: float = 0.0
+    deviation_s: float = 0.0
     answers: int = 0
 
     def after(self, delay_s: float) -> "Patience":
         """Return what is known after one more answer that took its meter `delay_s`."""
-        worst = max(delay_s, 0.99 * self.worst_s + 0.01 * delay_s)
-        return replace(self, last_s=delay_s, worst_s=worst, answers=self.answers + 1)
+        if not self.answers:
+            return Patience(delay_s, delay_s, delay_s / 2.0, 1)
+        error = delay_s - self.mean_s
+        deviation = self.deviation_s + (abs(error) - self.deviation_s) / 4.0
+        return Patience(delay_s, self.mean_s + error / 8.0, deviation, self.answers + 1)
 
     @property
     def limit_s(self) -> float:
         """How long the meter may think before it is given up. [s]"""
         if not self.answers:
             return FIRST_PATIENCE_S
-        return min(max(2.5 * self.worst_s + 0.05, LEAST_PATIENCE_S), MOST_PATIENCE_S)
+        return min(max(self.mean_s + 4.0 * self.deviation_s + SPARE_S, LEAST_PATIENCE_S), MOST_PATIENCE_S)
 
 
 def quiet_s(worst_lateness_s: float) -> float:

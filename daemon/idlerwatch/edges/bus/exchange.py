@@ -33,10 +33,10 @@ class Answer:
 
 @dataclass(frozen=True, slots=True)
 class MeterStatistics:
-    """What a meter is like on the wire: its last and worst answer delay, questions, and failures by kind."""
+    """What a meter is like on the wire: its last and usual answer delay, questions, and failures by kind."""
 
     answer_delay_s: float = 0.0
-    worst_delay_s: float = 0.0
+    usual_delay_s: float = 0.0
     asked: int = 0
     failed: Mapping[str, int] = field(default_factory=dict)
 
@@ -68,7 +68,7 @@ class Master:
         """Return what is known of a meter; may be called from any thread."""
         patience = self._patience.get(slave, Patience())
         failed = dict(self._failed.get(slave, {}))
-        return MeterStatistics(patience.last_s, patience.worst_s, self._asked.get(slave, 0), failed)
+        return MeterStatistics(patience.last_s, patience.mean_s, self._asked.get(slave, 0), failed)
 
     def longest_s(self, slave: int, block: Block) -> float:
         """Return how long a question may take at most, answered or not. [s]"""
