@@ -108,7 +108,7 @@ SUPPLY = {
 }
 
 
-def assessment(settings, at, letter="L", figures=(), meters=(), utc=UTC):
+def assessment(settings, at, letter="L", figures=(), *, meters=(), utc=UTC):
     """One sample: normal but for the figures and meters given."""
     state, loading = STATES[letter]
     values = normal(settings) | dict(figures)
@@ -142,11 +142,11 @@ class Player:
         self.standing = ()
         self.lamp = None
 
-    def play(self, seconds, letter="L", figures=(), meters=(), told=(), rows=()):
+    def play(self, seconds, letter="L", figures=(), *, meters=(), told=(), rows=()):
         """Feed so many samples; what is told comes with the first. Returns their events."""
         new = []
         for _ in range(round(seconds)):
-            given = assessment(self.settings, self.at, letter, figures, meters)
+            given = assessment(self.settings, self.at, letter, figures, meters=meters)
             self.state, events, self.standing, self.lamp = judge_alarms(self.state, given, told, rows)
             new += events
             told, rows = (), ()

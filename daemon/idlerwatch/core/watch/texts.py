@@ -57,27 +57,31 @@ def returning(scene: Scene) -> str:
 
 
 def fill(template: str, scene: Scene) -> str:
-    """Put the figures in, leave out the parts that have none, and the last ones where it gets too long."""
-    pieces = list(_PART.split(template))
-    texts = [_filled(piece, scene) for piece in pieces]
-    optional = list(range(1, len(texts), 2))
-    for place in optional:
-        if texts[place] is None:
-            texts[place] = ""
-    while len(_joined(texts)) > LONGEST and optional:
-        texts[optional.pop()] = ""
-    text = _joined(texts)
+    """Put the figures in, leave out the parts that lack one, and the last parts where it gets too long."""
+    texts = [
+        _part(piece, scene) if place % 2 else _always(piece, scene) for place, piece in enumerate(_PART.split(template))
+    ]
+    for place in range(len(texts) - 2, 0, -2):
+        if len("".join(texts)) <= LONGEST:
+            break
+        texts[place] = ""
+    text = "".join(texts)
     return text if len(text) <= LONGEST else text[: LONGEST - 1].rstrip() + "…"
 
 
-def _joined(texts: list[str | None]) -> str:
-    return "".join("not measured" if text is None else text for text in texts)
+def _part(piece: str, scene: Scene) -> str:
+    """Return a part with its figures, nothing where one is unknown."""
+    found = _fields(piece, scene)
+    return "" if "" in found.values() else piece.format(**found)
 
 
-def _filled(piece: str, scene: Scene) -> str | None:
-    """Return a piece with its figures; None where one is unknown."""
-    found = {name: FIELDS[name](scene) for name in _FIELD.findall(piece)}
-    return None if "" in found.values() else piece.format(**found)
+def _always(piece: str, scene: Scene) -> str:
+    """Return what is always said, with the words for what is unknown."""
+    return piece.format(**{name: text or "not measured" for name, text in _fields(piece, scene).items()})
+
+
+def _fields(piece: str, scene: Scene) -> dict[str, str]:
+    return {name: FIELDS[name](scene) for name in _FIELD.findall(piece)}
 
 
 # --------------------------------------------------------------------------
@@ -109,7 +113,7 @@ def _since(scene: Scene) -> str:
 
 
 def _lasted(scene: Scene) -> str:
-    return duration(scene.view.assessment.utc - scene.alarm.raised_at)
+    return duration(scene.view.assessment.utc - scene.alarm.raised_at + scene.item.delays.on)
 
 
 def duration(seconds: float) -> str:
@@ -141,13 +145,13 @@ def volts(value: float) -> str:
 
     Examples
     --------
-    >>> volts(184.6), volts(4.26), volts(0.2), volts(float("nan"))
-    ('185 V', '4.3 V', 'under 1 V', '')
+    >>> volts(184.6), volts(4.26), volts(0.02), volts(float("nan"))
+    ('185 V', '4.3 V', 'under 0.1 V', '')
     """
     if math.isnan(value):
         return ""
-    if abs(value) < 1.0:
-        return "under 1 V"
+    if abs(value) < 0.05:
+        return "under 0.1 V"
     return f"{value:.1f} V" if abs(value) < 10.0 else f"{value:.0f} V"
 
 
@@ -258,6 +262,9 @@ def _sure(scene: Scene) -> str:
     return "" if figure is None or not figure.is_known else _KNOWN.get(figure.known, "")
 
 
+_WAYS: Final[Mapping[str, str]] = {"mqtt": "the broker", "influx": "the database"}
+
+
 def _trouble(scene: Scene) -> str:
     text = scene.view.memory.troubles.get(scene.alarm.subject, "")
     return text if len(text) <= 90 else text[:89] + "…"
@@ -293,5 +300,6 @@ FIELDS: Final[Mapping[str, Callable[[Scene], str]]] = {
     "starts": _starts,
     "sure": _sure,
     "trouble": _trouble,
+    "way": lambda scene: _WAYS.get(scene.alarm.subject, scene.alarm.subject),
     "closing": lambda scene: (scene.settings.people.working_hours or "").rpartition("-")[2],
 }

@@ -73,7 +73,7 @@ TEXTS: Final[Mapping[str, Text]] = {
     ),
     "leading-supply": Text(
         "have the capacitors re-chosen. At idle the supply current leads: {value} of the idle power is capacitive"
-        " (limit {limit}[, usual {usual}]).[ From the supply meter, {sure}.]",
+        " (limit {limit}).[ {sure} by the supply meter.]",
         "the supply current leads no more than usual.",
     ),
     "neutral-shift": Text(
@@ -219,7 +219,7 @@ TEXTS: Final[Mapping[str, Text]] = {
         "the converter is watched again.",
     ),
     "earth-transducer-silent": Text(
-        "look at the supply and data cable of {thing}. The neutral-to-earth transducer is silent since {since}:"
+        "look at the supply and data cable of the transducer {thing}. It is silent since {since}:"
         " a broken neutral would not be told. From the bus.",
         "the transducer {thing} answers.",
     ),
@@ -233,18 +233,18 @@ TEXTS: Final[Mapping[str, Text]] = {
         "the board reports no more trouble with {thing}.",
     ),
     "way-out-down": Text(
-        "look at router, cable and server: {thing} cannot be reached since {since}[ ({trouble})]. As the board itself"
+        "look at router, cable and server: {way} cannot be reached since {since}[ ({trouble})]. As the board itself"
         " reports. Messages may not reach every phone.",
-        "{thing} is reached again.",
+        "{way} is reached again.",
     ),
     "idler-temperature": Text(
-        "let {thing} cool, unloaded. Its frame is at {value} since {since} (limit {limit}[, usual {usual}]).[ {sure}.]"
-        " Cooling air may be blocked.",
-        "frame of {thing} at {value}[ (usual {usual})].",
+        "let the {thing} cool, unloaded. Its frame is at {value} since {since} (limit {limit}[, usual {usual}])."
+        "[ {sure}.] Cooling air may be blocked.",
+        "frame of the {thing} at {value}[ (usual {usual})].",
     ),
     "machine-temperature": Text(
-        "let {thing} cool. Its frame is at {value} since {since} (limit {limit}[, usual {usual}]).[ {sure}.]"
+        "let the {thing} cool. Its frame is at {value} since {since} (limit {limit}[, usual {usual}]).[ {sure}.]"
         " Cooling air may be blocked.",
-        "frame of {thing} at {value}[ (usual {usual})].",
+        "frame of the {thing} at {value}[ (usual {usual})].",
     ),
 }

@@ -1,4 +1,4 @@
-"""Every alarm of the list that an installation has is raised and returned once, on both feeds, with a text by the rules."""
+"""Every alarm an installation has is raised and returned once, on both feeds, with a text by the rules."""
 
 import math
 import re
@@ -35,7 +35,7 @@ def window(value):
     return (WindowRow("10min", 0.0, "converter", "converter", {"voltage_unbalance_factor": value, "flagged": 0.0}),)
 
 
-def case(letter="L", before=30, good=None, bad_letter=None, told=(), clear=(), rows=(), clear_rows=(), **bad):
+def case(*, letter="L", before=30, good=None, bad_letter=None, told=(), clear=(), rows=(), clear_rows=(), **bad):
     return {
         "letter": letter,
         "before": before,
@@ -87,7 +87,9 @@ def cases(feed):
         "neutral-earth-high": case(figures={EARTH: 14.0}),
         "neutral-earth-dangerous": case(figures={EARTH: 60.0}),
         "neutral-earth-jump": case(figures={EARTH: 212.0}),
-        "neutral-earth-near-zero": case(good=supply(current_ratio=0.6), figures={EARTH: 0.02} | supply(current_ratio=0.6)),
+        "neutral-earth-near-zero": case(
+            good=supply(current_ratio=0.6), figures={EARTH: 0.02} | supply(current_ratio=0.6)
+        ),
         "supply-meter-silent": case(meters={"supply": "no answer"}),
         "leg-meter-silent": case(meters={legs: "no answer"}),
         "blind": case(bad_letter="B"),
@@ -115,11 +117,14 @@ def play(player, given, tag):
     """Good, bad until the alarm comes, good until it goes; returns its events."""
     alarm = player.settings.alarms[tag, ""]
     player.play(given["before"], given["letter"], given["good"])
-    longest = max(alarm.on_delay_s, (alarm.setpoint or 0) if alarm.unit == "s" else 0, 600 if tag == "ammeter-reversed" else 0)
-    player.play(longest + 10, given["bad_letter"], given["figures"], given["meters"], given["told"], given["rows"])
+    longest = max(
+        alarm.on_delay_s, (alarm.setpoint or 0) if alarm.unit == "s" else 0, 600 if tag == "ammeter-reversed" else 0
+    )
+    bad = {name: given[name] for name in ("figures", "meters", "told", "rows")}
+    player.play(longest + 10, given["bad_letter"], **bad)
     rest = 3000 if tag == "ammeter-reversed" else alarm.off_delay_s + 10
     letter = "L" if tag in ("converter-stopped-under-load", "left-on", "left-on-after-hours") else given["letter"]
-    player.play(rest, letter, given["good"], (), given["clear"], given["clear_rows"])
+    player.play(rest, letter, given["good"], told=given["clear"], rows=given["clear_rows"])
     return of(player.events, tag)
 
 
@@ -178,8 +183,11 @@ def test_leading_supply_is_told_on_a_generator_only():
 
 # -------------------------------------------------------------------------- the rules of the texts
 
-VERBS = (
-    "avoid ask call end have keep leave let look make note plan press stop switch take tell touch unplug".split()
+VERBS = frozenset(
+    (
+        *("avoid", "ask", "call", "end", "have", "keep", "leave", "let", "look", "make", "note", "plan", "press"),
+        *("stop", "switch", "take", "tell", "touch", "unplug"),
+    )
 )
 FORBIDDEN = (
     r"check (the )?system", r"\bdead\b", r"\bsafe\b", r"(?<![\d.])0 V", r"open the (box|panel|enclosure|cover)",
