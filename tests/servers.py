@@ -117,7 +117,7 @@ class VictoriaMetrics(Server):
     def export(self, name: str) -> str:
         """Return all series of a name (``measurement_field``) as JSON lines."""
         urllib.request.urlopen(f"{self.url}/internal/force_flush").read()  # noqa: S310
-        query = urllib.parse.urlencode({"match[]": name})
+        query = urllib.parse.urlencode({"match[]": name, "start": 0, "end": 4102444800})
         return urllib.request.urlopen(f"{self.url}/api/v1/export?{query}").read().decode()  # noqa: S310
 
 
