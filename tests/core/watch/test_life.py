@@ -36,7 +36,7 @@ from idlerwatch.core.watch.life import (
 SILENT = {"leg_2": "no answer", "leg_3": "no answer"}
 SURGE = supply_says(voltage=212.0, current=110.0, power=9000.0, reactive=21000.0)
 STARTING = stopped(supply=SURGE)
-SLOW_STARTING = running(supply=supply_says(current=30.0, power=3000.0), leg_2=said(90.0), leg_3=said(95.0))
+SLOW_STARTING = running(supply=supply_says(current=15.0, power=3000.0), leg_2=said(90.0), leg_3=said(95.0))
 COASTING = running(supply=supply_says(current=0.0, power=0.0), leg_2=said(120.0), leg_3=said(110.0))
 NO_SUPPLY_METER = {"supply": "no answer"}
 
@@ -169,6 +169,27 @@ def found(settings=None, life=None, **evidence):
 )
 def test_a_sample_is_put_into_one_word(evidence, finding):
     assert found(**evidence) == finding
+
+
+# from rest a start's current is 0.6 of full current, 19.6 A; a converter that runs takes as much loaded
+@pytest.mark.parametrize(
+    ("state", "evidence", "finding"),
+    [
+        ("stopped", {"current": 19.5, "generated": 0.1}, "humming"),
+        ("stopped", {"current": 19.6, "generated": 0.1}, "surging"),
+        ("stopped", {"current": 19.6}, "surging"),
+        ("starting", {"current": 30.0, "generated": 0.5}, "surging"),
+        ("starting", {"current": 30.0, "generated": 0.7}, "turning"),
+        ("starting", {"current": 30.0, "has_woken": True}, "surging"),
+        ("starting", {"current": 5.0, "has_woken": True}, "turning"),
+        ("running", {"current": 30.0, "generated": 0.1}, "humming"),
+        ("running", {"current": 30.0, "has_woken": True}, "turning"),
+        ("running", {"current": 30.0}, "unseen"),
+        ("blind", {"current": 30.0}, "unseen"),
+    ],
+)
+def test_at_rest_a_smaller_current_is_a_starts_and_a_booting_meter_tells_of_its_leg(state, evidence, finding):
+    assert found(life=LifeState(state=state), **evidence) == finding
 
 
 def test_half_of_the_known_idling_current_is_flow():

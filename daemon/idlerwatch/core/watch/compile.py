@@ -219,9 +219,10 @@ def _levels(settings: Settings, feed: Feed) -> Levels:
     """Return the current levels that follow from the nameplates.
 
     Rated power over the fed voltage is the measure of the supply's current. An idler idles on 6 to 10 % of its rated
-    power at least, whatever its capacitors compensate: 4 % is flow, less is not. It starts at several times that
-    current: twice is a surge. A motor without load draws a third of its rated current or more: 15 % is on; one that
-    starts draws five to seven times: 3 times is a start. (Common practice, no source.)
+    power at least, whatever its capacitors compensate: 4 % is flow, less is not. From rest it starts at 0.6 times that
+    current at least, at reduced voltage too; a loaded converter takes as much, so in any state only twice is a surge.
+    A motor without load draws a third of its rated current or more: 15 % is on; one that starts draws five to seven
+    times: 3 times is a start. (Common practice, no source.)
     """
     rated_watts = sum(idler.rated_kw for idler in settings.idler) * 1000.0
     full = rated_watts / feed.voltage
@@ -231,6 +232,7 @@ def _levels(settings: Settings, feed: Feed) -> Levels:
     return Levels(
         full=full,
         flow=0.04 * full,
+        start=0.6 * full,
         surge=2.0 * full,
         machine=0.15 * smallest,
         machine_surge=3.0 * smallest,

@@ -30,12 +30,12 @@ Finding = Literal["still", "coasting", "surging", "humming", "rising", "between"
 ========== ===========================================================================
 still      no supply current; generated legs dead, or their meters silent
 coasting   no supply current, yet generated legs carry voltage
-surging    a start's current, whatever the legs read (a start capacitor lifts one at standstill)
+surging    a start's current (at rest from a lower one on), whatever a start capacitor makes of the legs
 humming    the supply's current flows; generated legs dead
 rising     the supply's current flows; generated legs between dead and up
 between    generated legs between dead and up; supply current not known
 turning    generated legs up
-unseen     the supply's current flows; the generated legs' meters are silent
+unseen     the supply's current flows; the generated legs' meters are silent, none is booting
 nothing    nothing that decides
 ========== ===========================================================================
 """
@@ -89,6 +89,8 @@ CONFIRMATIONS: Final[Mapping[Finding, int]] = {
 }  # fmt: skip
 """How many samples in a row must find the same before the state moves. Two witnesses in one sample count as two."""
 
+AT_REST: Final = frozenset({"stopped", "starting", "change-over", "run-down"})
+"""States in which the supply has no load to feed, so that a smaller current is a start's."""
 DEAD: Final = 0.2
 """Generated legs below this ratio of nominal carry no voltage worth the name."""
 UP: Final = 0.7
@@ -108,7 +110,7 @@ class Evidence:
     """What the state is judged by; NaN where it is not seen.
 
     Supply current as its ammeter says and as its apparent power says [A], supply voltage and the legs' height over
-    nominal, the largest leg current [A].
+    nominal, the largest leg current [A], and whether a meter that lives on a generated leg is booting.
     """
 
     current: float
@@ -116,6 +118,7 @@ class Evidence:
     supply_ratio: float
     generated: float
     leg_current: float
+    has_woken: bool = False
 
 
 @dataclass(frozen=True, slots=True)
@@ -165,6 +168,7 @@ def gather(derived: Derived, plan: Plan) -> Evidence:
         supply_ratio=voltage / plan.feed.voltage,
         generated=derived.generated,
         leg_current=max(currents, default=NAN),
+        has_woken=any(derived.meters.get(name) == "booting" for name in plan.on_generated),
     )
 
 
@@ -190,12 +194,21 @@ def find(plan: Plan, state: LifeState, evidence: Evidence) -> Finding:
         return _by_voltages(evidence)
     if evidence.current >= plan.levels.surge:
         return "surging"
-    if math.isnan(evidence.generated):
-        # where the legs have no meter at all the current alone must do
-        return "unseen" if plan.watches_generated else "turning"
     if evidence.generated >= UP:
         return "turning"
+    if evidence.current >= plan.levels.start and state.state in AT_REST:
+        return "surging"
+    if math.isnan(evidence.generated):
+        return _by_meters(plan, evidence)
     return "rising" if evidence.generated >= DEAD else "humming"
+
+
+def _by_meters(plan: Plan, evidence: Evidence) -> Finding:
+    """Return the finding where the current flows and no meter reads a generated leg.
+
+    A meter that boots lives on its leg, so the leg does; where the legs have no meter at all the current alone must do.
+    """
+    return "turning" if evidence.has_woken or not plan.watches_generated else "unseen"
 
 
 def _by_voltages(evidence: Evidence) -> Finding:
@@ -211,10 +224,10 @@ def _witnesses(plan: Plan, state: LifeState, finding: Finding, evidence: Evidenc
     """Return how many independent witnesses a finding has: the meter's own powers, the legs' voltages."""
     match finding:
         case "surging":
-            return 1 + (evidence.power_current >= 0.5 * plan.levels.surge)
+            return 1 + (evidence.power_current >= 0.5 * plan.levels.start)
         case "turning" | "rising":
             flows = evidence.current >= flow_level(plan, state)
-            return 1 + (flows and not math.isnan(evidence.generated))
+            return 1 + (flows and (evidence.has_woken or not math.isnan(evidence.generated)))
         case _:
             return 1
 

@@ -94,10 +94,14 @@ class TwoWattmeters:
 
 @dataclass(frozen=True, slots=True)
 class Levels:
-    """From which currents on the supply flows, surges, and a machine is on; `full` is rated power over voltage. [A]"""
+    """From which currents on the supply flows, starts, surges, and a machine is on. [A]
+
+    `full` is rated power over voltage; `start` is a start's only at rest, `surge` in any state.
+    """
 
     full: float
     flow: float
+    start: float
     surge: float
     machine: float
     machine_surge: float
