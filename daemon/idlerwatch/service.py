@@ -102,8 +102,10 @@ class Parts:
 
     def start(self) -> None:
         """Start the threads, the ways out first."""
-        for part in (*self.outlets, *self.buses):
-            part.start()
+        for outlet in self.outlets:
+            outlet.start()
+        for bus in self.buses:
+            bus.start()
 
     def stop(self) -> None:
         """Stop the threads, the buses first, and bring everything to the disk."""
@@ -117,6 +119,9 @@ class Parts:
 
 def build(settings: Settings, post: Callable[[Mail], None], runtime: Path, live: Sequence[Live] = ()) -> Parts:
     """Make all parts of the daemon from its settings.
+
+    Trends wait for a clock that is right (or for ten minutes); messages do not: one whose stamp is wrong but which comes
+    now is worth more than one ten minutes late.
 
     Parameters
     ----------
@@ -141,19 +146,18 @@ def build(settings: Settings, post: Callable[[Mail], None], runtime: Path, live:
     journal = _journal(settings, runtime, report("disk"))
     outlets: list[Outlet] = []
     shown = list(live)
-    is_ready = ClockWait()
     if settings.mqtt is not None:
         secret = _secret("mqtt", "password_file", settings.mqtt.password_file)
         names = (settings.site.name, settings.site.converter)
         mqtt = Mqtt(settings.mqtt, *names, password=secret, command=post, report=report("mqtt"))
         cursor = Cursor(journal.path, "mqtt", journal.last_sequence)
-        outlets.append(Outlet("event", journal, cursor, mqtt, report=report("mqtt"), is_ready=is_ready))
+        outlets.append(Outlet("event", journal, cursor, mqtt, report=report("mqtt")))
         shown.append(mqtt)
     if settings.influx is not None:
         secret = _secret("influx", "token_file", settings.influx.token_file)
         influx = Influx(settings.influx, settings.site.name, settings.site.converter, token=secret, folder=journal.path)
         cursor = Cursor(journal.path, "influx", 0, INFLUX_CURSOR_S)
-        outlets.append(Outlet("window", journal, cursor, influx, report=report("influx"), is_ready=is_ready))
+        outlets.append(Outlet("window", journal, cursor, influx, report=report("influx"), is_ready=ClockWait()))
     buses = [
         BusThread(
             bus,

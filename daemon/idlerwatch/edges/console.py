@@ -71,7 +71,8 @@ class Console:
         self._view = _View(title, labels or {})
         self._latest: Assessment | None = None
         self._told: deque[AlarmEvent] = deque(maxlen=MESSAGES_SHOWN)
-        self._unwritten: deque[AlarmEvent] = deque(maxlen=MESSAGES_KEPT)
+        self._unwritten: deque[AlarmEvent | str] = deque(maxlen=MESSAGES_KEPT)
+        self._note = ""
         self._is_stopping = threading.Event()
         run = self._run_table if self._terminal.is_terminal else self._run_lines
         self._thread = threading.Thread(target=run, name="console", daemon=True)
@@ -90,6 +91,11 @@ class Console:
             self._told.append(event)
             self._unwritten.append(event)
 
+    def note(self, text: str) -> None:
+        """Take a sentence about what happens around the converter: what a demo does to it."""
+        self._note = text
+        self._unwritten.append(text)
+
     def stop(self) -> None:
         """Show the last state and end."""
         self._is_stopping.set()
@@ -99,8 +105,12 @@ class Console:
     def _run_table(self) -> None:
         with Live(console=self._terminal, auto_refresh=False, vertical_overflow="crop") as live:
             while not self._is_stopping.wait(REFRESH_S):
-                live.update(self._view.table(self._latest, tuple(self._told)), refresh=True)
-            live.update(self._view.table(self._latest, tuple(self._told)), refresh=True)
+                live.update(self._picture(), refresh=True)
+            live.update(self._picture(), refresh=True)
+
+    def _picture(self) -> RenderableType:
+        table = self._view.table(self._latest, tuple(self._told))
+        return Group(Text(f"* {self._note}", style="italic"), table) if self._note else table
 
     def _run_lines(self) -> None:
         due = -float("inf")
@@ -108,7 +118,8 @@ class Console:
             is_last = self._is_stopping.wait(REFRESH_S)
             offset = self._latest.local_offset if self._latest else 0.0
             while self._unwritten:
-                self._write(message_line(self._unwritten.popleft(), offset))
+                item = self._unwritten.popleft()
+                self._write(f"          * {item}" if isinstance(item, str) else message_line(item, offset))
             if self._latest is not None and self._latest.at >= due:
                 due = self._latest.at + LINE_EVERY_S
                 self._write(status_line(self._latest))

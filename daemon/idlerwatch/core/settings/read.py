@@ -161,6 +161,8 @@ def explain(error: ValidationError, model: type[BaseModel], document: Document) 
     """Return pydantic's findings as faults with places in the words of the settings file."""
     faults: list[Fault] = []
     for detail in error.errors(include_url=False):
+        if detail["type"] == "too_short" and detail["input"]:
+            continue  # entries that are faulty themselves, and named
         fault = _explain(detail, model, document)
         if fault.place not in {known.place for known in faults}:
             faults.append(fault)

@@ -1,0 +1,137 @@
+"""Nodal equations of a small network of phasors: windings, capacitors, switches, sources behind an impedance.
+
+Every matrix has its two node axes last and any axes before them; everything is linear algebra over those, so many
+converters, load states or hypotheses are one call. Potentials are complex rms values to the node left out (earth).
+
+The winding matrix is that of symmetrical components (C. L. Fortescue, 1918): Y = A diag(Y0, Y1, Y2) A^-1 with
+a = exp(j 2 pi/3), for the sequence L1-L2-L3.
+"""
+
+import cmath
+import math
+from collections.abc import Sequence
+from typing import Final
+
+import numpy as np
+from numpy.typing import NDArray
+
+Complexes = NDArray[np.complex128]
+Floats = NDArray[np.float64]
+
+OPERATOR: Final = cmath.exp(2j * math.pi / 3.0)
+"""The operator a, a third of a turn."""
+
+SEQUENCES: Final[Complexes] = np.array(
+    [[1.0, 1.0, 1.0], [1.0, OPERATOR**2, OPERATOR], [1.0, OPERATOR, OPERATOR**2]], dtype=np.complex128
+)
+"""The matrix A: columns zero, positive, negative sequence; rows L1, L2, L3."""
+
+_INVERSE: Final[Complexes] = np.conj(SEQUENCES.T) / 3.0
+
+
+def winding_matrix(sequence_admittances: Complexes) -> Complexes:
+    """Return the admittances of three windings between the legs and their star point.
+
+    Parameters
+    ----------
+    sequence_admittances : (..., 3)
+        Y0, Y1, Y2 a phase; Y0 = 0 for a floating star point. [S]
+
+    Returns
+    -------
+    (..., 3, 3)
+        Y with I = Y V, V to the star point. [S]
+
+    Examples
+    --------
+    >>> y = winding_matrix(np.array([0.0, 2.0 - 3.0j, 2.0 - 3.0j]))
+    >>> bool(np.allclose(y @ np.array([1.0, OPERATOR**2, OPERATOR]), (2 - 3j) * np.array([1.0, OPERATOR**2, OPERATOR])))
+    True
+    """
+    matrix: Complexes = (SEQUENCES * sequence_admittances[..., None, :]) @ _INVERSE
+    return matrix
+
+
+def with_terminal(matrix: Complexes) -> Complexes:
+    """Return the matrix with one more node, through which all currents return: (..., k, k) -> (..., k+1, k+1)."""
+    column = -matrix.sum(axis=-1, keepdims=True)
+    wide = np.concatenate([matrix, column], axis=-1)
+    row = -wide.sum(axis=-2, keepdims=True)
+    return np.concatenate([wide, row], axis=-2)
+
+
+def behind_impedances(matrix: Complexes, impedances: Complexes | Floats) -> Complexes:
+    """Return the admittances of a network seen through an impedance in series with each of its nodes.
+
+    A large impedance is an open pole: the node behind it floats, and is thereby eliminated (Kron reduction); the matrix
+    may be singular, as that of a floating star is.
+
+    Parameters
+    ----------
+    matrix : (..., k, k)
+        Nodal admittances. [S]
+    impedances : (..., k)
+        Impedance in series with each node. [ohm]
+
+    Returns
+    -------
+    (..., k, k)
+        (1 + Y Z)^-1 Y. [S]
+    """
+    through = np.eye(matrix.shape[-1]) + matrix * impedances[..., None, :]
+    return np.asarray(np.linalg.solve(through, matrix), dtype=np.complex128)
+
+
+def pair_matrix(nodes: int, pairs: Sequence[tuple[int, int]], admittances: Complexes) -> Complexes:
+    """Return the nodal pattern of admittances between pairs of nodes.
+
+    Parameters
+    ----------
+    nodes
+        How many nodes there are.
+    pairs
+        For each admittance the two nodes it joins; a negative second node is the earth that was left out.
+    admittances : (..., len(pairs))
+        The admittances. [S]
+
+    Returns
+    -------
+    (..., nodes, nodes)
+        The sum of their patterns. [S]
+
+    Examples
+    --------
+    >>> pair_matrix(2, [(0, 1), (1, -1)], np.array([2.0 + 0j, 5.0 + 0j])).real.tolist()
+    [[2.0, -2.0], [-2.0, 7.0]]
+    """
+    pattern = incidence(nodes, pairs)
+    matrix: Complexes = np.swapaxes(pattern, 0, 1) @ (admittances[..., None] * pattern)
+    return matrix
+
+
+def incidence(nodes: int, pairs: Sequence[tuple[int, int]]) -> Floats:
+    """Return the incidence matrix (len(pairs), nodes): +1 at the first node of a pair, -1 at the second."""
+    pattern = np.zeros((len(pairs), nodes))
+    for row, (first, second) in enumerate(pairs):
+        pattern[row, first] += 1.0
+        if second >= 0:
+            pattern[row, second] -= 1.0
+    return pattern
+
+
+def solve_nodes(matrix: Complexes, injections: Complexes) -> Complexes:
+    """Return the potentials that make the nodal currents balance.
+
+    Parameters
+    ----------
+    matrix : (..., k, k)
+        Nodal admittances to the reference. [S]
+    injections : (..., k)
+        Current put into each node; a source E behind the admittance y puts in y E. [A]
+
+    Returns
+    -------
+    (..., k)
+        Potentials to the reference. [V]
+    """
+    return np.asarray(np.linalg.solve(matrix, injections[..., None])[..., 0], dtype=np.complex128)
