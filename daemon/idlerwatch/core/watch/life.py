@@ -28,8 +28,8 @@ Finding = Literal["still", "coasting", "surging", "humming", "rising", "between"
 """What one sample says.
 
 ========== ===========================================================================
-still      no supply current; generated legs dead, or their meters silent
-coasting   no supply current, yet generated legs carry voltage
+still      no supply current for the idler; generated legs dead, or their meters silent
+coasting   no supply current for the idler, yet generated legs carry voltage
 surging    a start's current (at rest from a lower one on), whatever a start capacitor makes of the legs
 humming    the supply's current flows; generated legs dead
 rising     the supply's current flows; generated legs between dead and up
@@ -109,11 +109,13 @@ MACHINE_START_S: Final = 30.0
 class Evidence:
     """What the state is judged by; NaN where it is not seen.
 
-    Supply current as its ammeter says and as its apparent power says [A], supply voltage and the legs' height over
+    Supply current as its ammeter says, what of it the machines do not take (the ammeter's where that is not seen), and
+    supply current as its apparent power says [A], supply voltage and the legs' height over
     nominal, the largest leg current [A], and whether a meter that lives on a generated leg is booting.
     """
 
     current: float
+    idler_current: float
     power_current: float
     supply_ratio: float
     generated: float
@@ -164,12 +166,26 @@ def gather(derived: Derived, plan: Plan) -> Evidence:
     currents = [power.current.value for power in derived.legs.values() if power.current.is_known]
     return Evidence(
         current=derived.supply.current.value,
+        idler_current=_idler_current(derived),
         power_current=watts / voltage if voltage > 0.0 else NAN,
         supply_ratio=voltage / plan.feed.voltage,
         generated=derived.generated,
         leg_current=max(currents, default=NAN),
         has_woken=any(derived.meters.get(name) == "booting" for name in plan.on_generated),
     )
+
+
+def _idler_current(derived: Derived) -> float:
+    """Return what of the supply's current the machines do not take. [A]
+
+    A machine left on when the converter stops runs on through the fed legs, draws current and holds the legs up; that
+    the idler takes nothing shows in the powers alone.
+    """
+    supply, machines = derived.supply, derived.total
+    rest = math.hypot(supply.active.value - machines.active.value, supply.reactive.value - machines.reactive.value)
+    if math.isnan(rest) or not supply.voltage.value > 0.0:
+        return supply.current.value
+    return min(supply.current.value, rest / supply.voltage.value)
 
 
 # --------------------------------------------------------------------------
@@ -188,7 +204,7 @@ def flow_level(plan: Plan, state: LifeState) -> float:
 
 def find(plan: Plan, state: LifeState, evidence: Evidence) -> Finding:
     """Return what one sample says, in one word."""
-    if evidence.supply_ratio < SUPPLY_GONE or evidence.current < flow_level(plan, state):
+    if evidence.supply_ratio < SUPPLY_GONE or evidence.idler_current < flow_level(plan, state):
         return "coasting" if evidence.generated >= DEAD else "still"
     if math.isnan(evidence.current):
         return _by_voltages(evidence)
@@ -228,6 +244,9 @@ def _witnesses(plan: Plan, state: LifeState, finding: Finding, evidence: Evidenc
         case "turning" | "rising":
             flows = evidence.current >= flow_level(plan, state)
             return 1 + (flows and (evidence.has_woken or not math.isnan(evidence.generated)))
+        case "still":
+            rests = evidence.idler_current < flow_level(plan, state)
+            return 1 + (rests and evidence.generated < DEAD)
         case _:
             return 1
 
