@@ -99,6 +99,19 @@ def make_shed(tmp_path):
 
 
 @pytest.fixture
+def make_broker(tmp_path):
+    brokers = []
+
+    def make(*lines):
+        brokers.append(Broker(tmp_path / "broker", *lines))
+        return brokers[-1]
+
+    yield make
+    for broker in brokers:
+        broker.kill()
+
+
+@pytest.fixture
 def phone(broker):
     phone = Phone(broker.port)
     yield phone
@@ -183,8 +196,8 @@ def test_showing_never_waits_and_drops_what_nobody_could_see(tmp_path):
     assert mqtt._inbox.qsize() == 1
 
 
-def test_a_broker_that_comes_later_gets_everything_and_it_is_said_once_each_way(tmp_path, make_shed):
-    late = Broker(tmp_path / "late")
+def test_a_broker_that_comes_later_gets_everything_and_it_is_said_once_each_way(make_broker, make_shed):
+    late = make_broker()
     shed = make_shed(late.port)
     for n in range(5):
         shed.journal.add_alarm(event(n))
@@ -200,14 +213,13 @@ def test_a_broker_that_comes_later_gets_everything_and_it_is_said_once_each_way(
         wait_until(lambda: phone.of("lamp") == ["look"])
     finally:
         phone.close()
-        late.kill()
     wait_until(lambda: sum(text == "" for text in shed.said) >= 1)
 
 
-def test_a_broker_killed_in_mid_stream_loses_no_message(tmp_path, make_shed):
+def test_a_broker_killed_in_mid_stream_loses_no_message(tmp_path, make_broker, make_shed):
     folder = tmp_path / "broker"
     keeps_what_it_acknowledged = ("persistence true", f"persistence_location {folder}/", "autosave_interval 1")
-    broker = Broker(folder, *keeps_what_it_acknowledged, "autosave_on_changes true", "max_queued_messages 0")
+    broker = make_broker(*keeps_what_it_acknowledged, "autosave_on_changes true", "max_queued_messages 0")
     broker.start()
     phone = Phone(broker.port, client_id="phone")
     shed = make_shed(broker.port)
@@ -222,11 +234,10 @@ def test_a_broker_killed_in_mid_stream_loses_no_message(tmp_path, make_shed):
     every_one = {event(n).identity for n in range(300)}
     wait_until(lambda: set(phone.messages()) == every_one, what="every message at least once")
     phone.close()
-    broker.kill()
 
 
-def test_retained_state_is_published_again_when_a_broker_has_forgotten_it(tmp_path, make_shed):
-    broker = Broker(tmp_path / "broker")
+def test_retained_state_is_published_again_when_a_broker_has_forgotten_it(make_broker, make_shed):
+    broker = make_broker()
     broker.start()
     shed = make_shed(broker.port)
     shed.mqtt.show(assessment())
@@ -236,7 +247,6 @@ def test_retained_state_is_published_again_when_a_broker_has_forgotten_it(tmp_pa
     assert json.loads(retained(broker.port, "alarm/leg-low/l2"))["tag"] == "leg-low"
     assert retained(broker.port, "lamp") == "look"
     assert retained(broker.port, "watching") == "yes"
-    broker.kill()
 
 
 def test_records_of_alarms_that_no_longer_stand_are_emptied(broker, make_shed, phone):
@@ -247,12 +257,12 @@ def test_records_of_alarms_that_no_longer_stand_are_emptied(broker, make_shed, p
     assert retained(broker.port, "alarm/leg-low/l2")
 
 
-def test_a_broker_that_forbids_the_message_topic_is_a_trouble_and_the_message_is_kept(tmp_path, make_shed):
+def test_a_broker_that_forbids_the_message_topic_is_a_trouble_and_the_message_is_kept(tmp_path, make_broker, make_shed):
     folder = tmp_path / "broker"
     folder.mkdir()
     acl = folder / "acl"
     acl.write_text(f"topic readwrite {BEGINNING}/watching\ntopic read {BEGINNING}/#\n")
-    broker = Broker(folder, f"acl_file {acl}")
+    broker = make_broker(f"acl_file {acl}")
     broker.start()
     shed = make_shed(broker.port)
     shed.journal.add_alarm(event())
@@ -262,18 +272,16 @@ def test_a_broker_that_forbids_the_message_topic_is_a_trouble_and_the_message_is
     broker.kill()
     broker.start()
     wait_until(lambda: shed.outlet._cursor.at == 1, 20.0)
-    broker.kill()
 
 
-def test_a_wrong_password_is_a_trouble(tmp_path, make_shed):
+def test_a_wrong_password_is_a_trouble(tmp_path, make_broker, make_shed):
     folder = tmp_path / "broker"
     folder.mkdir()
     (folder / "passwords").write_text("")
-    broker = Broker(folder, "allow_anonymous false", f"password_file {folder / 'passwords'}")
+    broker = make_broker("allow_anonymous false", f"password_file {folder / 'passwords'}")
     broker.start()
     shed = make_shed(broker.port, settings={"username": "boatshed"}, password="wrong")  # noqa: S106
     wait_until(lambda: any("Not authorized" in text for text in shed.said))
-    broker.kill()
 
 
 def test_commands_come_in_as_inputs(watched, phone):

@@ -35,6 +35,9 @@ log = logging.getLogger(__name__)
 
 KEEPALIVE_S: Final = 15
 LONGEST_RECONNECT_S: Final = 30
+AT_ONCE: Final = 8
+"""Records sent together. Fewer than the twenty unacknowledged messages that the library and a broker allow: beyond that
+the library holds messages back, and after a reconnection some of those wait until the next one is acknowledged."""
 ACKNOWLEDGED_WITHIN_S: Final = 10.0
 FAREWELL_S: Final = 1.0
 INBOX_SIZE: Final = 4096
@@ -154,6 +157,7 @@ class Mqtt:
         """Publish what people are told, wait for the broker, return the last record it has acknowledged."""
         if not self._is_connected.is_set():
             raise Away(self._why_away)
+        records = records[:AT_ONCE]
         told = {record.sequence: event for record in records if (event := _told(record)) is not None}
         for sequence, event in told.items():
             if not self._flight.holds(sequence):
