@@ -72,6 +72,12 @@ class Server:
             self.process.wait()
             self.process = None
 
+    def stop(self) -> None:
+        """End it in order: it brings to the disk what it has acknowledged."""
+        self.process.terminate()
+        self.process.wait(DEADLINE_S)
+        self.process = None
+
     @property
     def url(self) -> str:
         return f"http://127.0.0.1:{self.port}"

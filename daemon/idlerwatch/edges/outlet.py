@@ -93,7 +93,8 @@ class Outlet:
     sender
         The far side.
     report
-        Told a sentence when the far side is away, an empty text when it is back.
+        Told a sentence when the far side is away, an empty text when it is back. Left out where the sender, which knows
+        more, tells it itself (`mqtt.Mqtt`).
     is_ready
         Asked each second until true: whether stamps are right (`clock.ClockWait`).
     """
@@ -105,7 +106,7 @@ class Outlet:
         cursor: Cursor,
         sender: Sender,
         *,
-        report: Callable[[str], None],
+        report: Callable[[str], None] = lambda _: None,
         is_ready: Callable[[], bool] = lambda: True,
         pace: Pace = Pace(),
     ) -> None:

@@ -181,18 +181,20 @@ class Mqtt:
 
     def _last_acknowledged(self, records: Sequence[Record], told: Mapping[int, AlarmEvent]) -> int:
         last = records[0].sequence - 1
-        failure: str | None = None
+        failure: str | None = ""
         for record in records:
             if record.sequence in told:
                 failure = self._flight.take(record.sequence)
                 if failure != "":
                     break
             last = record.sequence
-        text = "" if failure in (None, "") else f"the broker refuses messages: {failure}"
+        text = f"the broker refuses messages: {failure}" if failure else ""
+        if failure is None and last < records[0].sequence:
+            text = f"the broker has not acknowledged a message within {ACKNOWLEDGED_WITHIN_S:.0f} s"
         self._troubles.say("message", text)
-        if last >= records[0].sequence:
-            return last
-        raise Away(text or f"the broker has not acknowledged within {ACKNOWLEDGED_WITHIN_S:.0f} s")
+        if last < records[0].sequence:
+            raise Away(text)
+        return last
 
     def _publish(self, level: str, payload: str, *, qos: int = 1, retain: bool = False) -> int:
         info = self._client.publish(self._topic(level), payload, qos=qos, retain=retain)
