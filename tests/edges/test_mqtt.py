@@ -1,5 +1,6 @@
 import json
 import queue
+import subprocess
 import threading
 import time
 
@@ -17,7 +18,7 @@ from idlerwatch.edges.journal import Cursor, Journal
 from idlerwatch.edges.mqtt import Mqtt
 from idlerwatch.edges.outlet import Outlet, Pace
 from idlerwatch.schemas import schema
-from servers import Broker, wait_until
+from servers import Broker, binary, wait_until
 
 BEGINNING = "idlerwatch/slipway/boatshed"
 QUICK = Pace(first_s=0.02, longest_s=0.2)
@@ -315,3 +316,24 @@ def test_without_leave_no_command_is_heard(broker, make_shed, phone):
     shed.journal.add_alarm(event())
     wait_until(phone.messages)
     assert shed.commands.empty()
+
+
+# the library leaves the socket of a refused handshake to the garbage collector
+@pytest.mark.filterwarnings("ignore::pytest.PytestUnraisableExceptionWarning")
+def test_a_broker_is_trusted_by_its_authority_alone(tmp_path, make_broker, make_shed):
+    folder = tmp_path / "broker"
+    folder.mkdir()
+    for name in ("ours", "foreign"):
+        key, certificate = folder / f"{name}.key", folder / f"{name}.pem"
+        subject = ["-subj", "/CN=localhost", "-addext", "subjectAltName=IP:127.0.0.1"]
+        request = [binary("openssl"), "req", "-x509", "-newkey", "rsa:2048", "-nodes", "-days", "2", *subject]
+        subprocess.run([*request, "-keyout", key, "-out", certificate], check=True, capture_output=True)
+    broker = make_broker(f"certfile {folder / 'ours.pem'}", f"keyfile {folder / 'ours.key'}")
+    broker.start()
+    stranger = make_shed(broker.port, settings={"ca_file": str(folder / "foreign.pem")})
+    wait_until(lambda: stranger.said)
+    shed = make_shed(broker.port, settings={"ca_file": str(folder / "ours.pem")})
+    shed.journal.add_alarm(event())
+    wait_until(lambda: shed.outlet._cursor.at == 1)
+    assert stranger.outlet._cursor.at == 0
+    assert shed.said == []
