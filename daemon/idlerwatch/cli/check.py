@@ -1,17 +1,17 @@
 """``idlerwatch check``: every fault of the settings at once, or what this installation can and cannot see."""
 
+import textwrap
 from pathlib import Path
+from typing import Final
 
 import click
-from rich.console import Console
-from rich.padding import Padding
-from rich.text import Text
 
 from idlerwatch.core.settings.advice import advise, bus_time_s, wiring_level
 from idlerwatch.core.settings.model import Settings
 from idlerwatch.core.watch.alarms import availability
 from idlerwatch.edges.files import load_settings
 
+WIDTH: Final = 88
 _EXAMPLE = "\b\nExample:\n  idlerwatch check --settings /etc/idlerwatch/idlerwatch.toml"
 
 
@@ -24,25 +24,23 @@ def command(path: Path) -> None:
     Advice is no fault: the exit code is 0.
     """
     settings = load_settings(path)
-    console = Console(highlight=False, soft_wrap=False)
     for line in summary(settings):
-        console.print(Text(line))
-    console.print(Text("\nWhat this installation sees, and what would be better", style="bold"))
+        click.echo(textwrap.fill(line, WIDTH, subsequent_indent="  "))
+    click.echo("\nWhat this installation sees, and what would be better")
     for sentence in advise(settings):
-        console.print(Padding(Text(f"- {sentence}"), (0, 0, 0, 2)))
+        click.echo(textwrap.fill(f"- {sentence}", WIDTH, initial_indent="  ", subsequent_indent="    "))
     missing = [tag for tag, reason in availability(settings).items() if reason]
-    console.print(
-        Text(f"\n{len(missing)} alarms of the list are not available here; `idlerwatch alarms` says which, and why.")
-    )
+    click.echo(f"\n{len(missing)} alarms of the list are not available here; `idlerwatch alarms` says which, and why.")
 
 
 def summary(settings: Settings) -> list[str]:
     """Return the installation in a few lines."""
     supply = settings.supply
+    idlers = sum(idler.rated_kw for idler in settings.idler)
     lines = [
         f"{settings.site.name} / {settings.site.converter}: the settings are in order.",
-        f"Feed {supply.feed}, {supply.voltage:g} V, {supply.frequency:g} Hz, {supply.earthing}; "
-        f"{sum(idler.rated_kw for idler in settings.idler):g} kW of idlers; wiring level {wiring_level(settings)}.",
+        f"Feed {supply.feed}, {supply.voltage:g} V, {supply.frequency:g} Hz, {supply.earthing}; {idlers:g} kW of idlers.",
+        f"Wiring level {wiring_level(settings)}.",
     ]
     for bus in settings.bus:
         meters = [meter.name for meter in settings.meter if meter.bus == bus.name]

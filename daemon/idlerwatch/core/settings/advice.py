@@ -45,8 +45,9 @@ def _unbalance(settings: Settings) -> Iterator[str]:
         yield "Unbalance is measured: all three line voltages are."
     elif set(NEUTRAL_PAIRS) & set(_pairs(settings)):
         yield (
-            "Angles between the legs are not seen: leg-to-neutral voltages can look even while the lines are not. The "
-            "true unbalance is not available, and never told as normal; line voltages measured would show it."
+            "Angles between the legs are not seen: leg-to-neutral voltages can look even while the lines "
+            "are not. The true unbalance is not available, and never told as normal; line voltages measured "
+            "would show it."
         )
     else:
         yield "The legs are not seen: no meter stands across them."
@@ -55,8 +56,9 @@ def _unbalance(settings: Settings) -> Iterator[str]:
 def _supply(settings: Settings) -> Iterator[str]:
     if not _supply_meters(settings):
         yield (
-            "No meter stands at the supply: when the leg meters fall silent nothing can tell a stopped converter from a "
-            'cut cable, and the state is then "blind". A supply meter is the best single meter there is.'
+            "No meter stands at the supply: when the leg meters fall silent nothing can tell a stopped "
+            'converter from a cut cable, and the state is then "blind". A supply meter is the best single '
+            "meter there is."
         )
         return
     own = [meter for meter in _supply_meters(settings) if meter.power_pair is None]
@@ -70,22 +72,22 @@ def _starts(settings: Settings) -> Iterator[str]:
     on_generated = [meter.name for meter in settings.meter if _lives_on_generated(settings, meter)]
     if on_generated:
         yield (
-            f"{_list(on_generated)} live on generated legs: they are silent while the converter is off or starting, and "
-            "reset when a heavy machine pulls the legs down. Their silence is then no fault, and what happens in it is "
-            "not seen."
+            f"{_list(on_generated)} live on generated legs: they are silent while the converter is off or "
+            "starting, and reset when a heavy machine pulls the legs down. Their silence is then no fault, "
+            "and what happens in it is not seen."
         )
     if settings.bank and not _sees_banks(settings) and not settings.contact:
         yield (
-            "Whether a bank is in during a start can hardly be seen at this wiring: an ammeter in the bank or an auxiliary "
-            "contact of its contactor would show it."
+            "Whether a bank is in during a start can hardly be seen at this wiring: an ammeter in the bank "
+            "or an auxiliary contact of its contactor would show it."
         )
 
 
 def _earth(settings: Settings) -> Iterator[str]:
     if NEUTRAL_PAIR in _pairs(settings):
         yield (
-            "Neutral to earth is measured. It shows a neutral broken between the N-PE bond and the converter; one broken "
-            "before the bond lifts neutral and earth together and does not show."
+            "Neutral to earth is measured. It shows a neutral broken between the N-PE bond and the "
+            "converter; one broken before the bond lifts neutral and earth together and does not show."
         )
     elif settings.supply.as_feed.has_neutral:
         yield "Neutral to earth is not measured: a lifted neutral will not be told."
@@ -106,14 +108,15 @@ def _wire_time(settings: Settings) -> Iterator[str]:
         needed = bus_time_s(settings, bus)
         if settings.site.cycle_s and needed > BUSIEST * settings.site.cycle_s:
             yield (
-                f"The bus {bus.name} needs {needed:.2f} s for its meters, the cycle is {settings.site.cycle_s:g} s: cycles "
-                "will be longer. A higher baud rate, a second bus or a longer cycle_s helps."
+                f"The bus {bus.name} needs {needed:.2f} s for its meters, the cycle is "
+                f"{settings.site.cycle_s:g} s: cycles will be longer. A higher baud rate, a second bus or a "
+                "longer cycle_s helps."
             )
         alive = [meter.name for meter in settings.meter if meter.bus == bus.name and meter.power_pair is None]
         if alive and len(alive) < sum(meter.bus == bus.name for meter in settings.meter):
             yield (
-                f"On the bus {bus.name}, let an always-powered meter ({_list(alive)}) stand at the far end of the cable: a "
-                "cut then silences it too, and is told."
+                f"On the bus {bus.name}, let an always-powered meter ({_list(alive)}) stand at the far end "
+                "of the cable: a cut then silences it too, and is told."
             )
 
 
@@ -123,8 +126,8 @@ def _ways_out(settings: Settings) -> Iterator[str]:
         yield "There is no [mqtt]: no message can reach a phone."
     elif mqtt.host in ("localhost", "127.0.0.1", "::1"):
         yield (
-            "The broker is on this board: when the shed's supply goes, messages go with it. A broker outside the shed's "
-            "supply, or a small uninterruptible supply for board and router, is better."
+            "The broker is on this board: when the shed's supply goes, messages go with it. A broker "
+            "outside the shed's supply, or a small uninterruptible supply for board and router, is better."
         )
     if settings.journal is None:
         yield "There is no [journal]: only the last hour is kept, and nothing of it survives a restart of the board."
