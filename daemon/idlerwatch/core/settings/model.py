@@ -26,9 +26,9 @@ PriorityWhen = Literal["S", "A", "C", "U", "M", "L", "D", "B", "W", "machines", 
 
 
 class Table(BaseModel):
-    """What all tables have in common: frozen, no unknown keys."""
+    """What all tables have in common: frozen, no unknown keys, only finite numbers."""
 
-    model_config = ConfigDict(frozen=True, extra="forbid", arbitrary_types_allowed=True)
+    model_config = ConfigDict(frozen=True, extra="forbid", arbitrary_types_allowed=True, allow_inf_nan=False)
 
 
 class Site(Table):

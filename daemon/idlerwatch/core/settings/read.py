@@ -136,20 +136,19 @@ def _read_alarms(
         }
         table |= {key: value for key, value in own.items() if key not in subjects}
         for subject, special in {"": {}, **subjects}.items():
-            alarm = _read_alarm(tag, subject, {**table, **special}, faults)
-            if alarm is not None:
-                alarms[tag, subject] = alarm
+            alarms[tag, subject] = _read_alarm(tag, subject, {**table, **special}, faults)
     return alarms
 
 
-def _read_alarm(tag: str, subject: str, table: Document, faults: list[Fault]) -> Alarm | None:
+def _read_alarm(tag: str, subject: str, table: Document, faults: list[Fault]) -> Alarm:
+    """Return an alarm; a faulty one holds its place, so that alarms which explain it are not faulty too."""
     place = f"alarms.{tag}.{subject}" if subject else f"alarms.{tag}"
     try:
         return Alarm.model_validate({"tag": tag, **table})
     except ValidationError as error:
         found = (Fault(f"{place}.{fault.place}", fault.found, fault.wanted) for fault in explain(error, Alarm, table))
         faults += [fault for fault in found if fault not in faults]
-        return None
+        return Alarm.model_construct(tag=tag)
 
 
 # --------------------------------------------------------------------------
