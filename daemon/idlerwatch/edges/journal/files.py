@@ -79,7 +79,8 @@ def period_of(path: Path) -> str:
 def open_for_writing(path: Path, kind: Kind) -> sqlite3.Connection:
     """Open or make a file; a commit of an event is on the disk when it returns, one of a block soon after."""
     path.parent.mkdir(parents=True, exist_ok=True)
-    connection = sqlite3.connect(path, isolation_level=None, timeout=5.0, check_same_thread=False)
+    address = f"{path.resolve().as_uri()}?vfs={_vfs(path)}"
+    connection = sqlite3.connect(address, uri=True, isolation_level=None, timeout=5.0, check_same_thread=False)
     try:
         connection.execute(f"PRAGMA page_size = {_PAGE_BYTES}")
         connection.execute("PRAGMA journal_mode = WAL")
@@ -91,17 +92,29 @@ def open_for_writing(path: Path, kind: Kind) -> sqlite3.Connection:
     return connection
 
 
+def _vfs(path: Path) -> str:
+    """Return how SQLite shall lock a file.
+
+    Blocks are committed all day: the index of their write-ahead log is kept in memory (``unix-excl``), since as a file
+    it would be written anew with each commit and make more than half of all bytes written. Readers in this process see
+    each commit at once, those in another see what has been checkpointed.
+    """
+    return "unix" if path.name.startswith("event") else "unix-excl"
+
+
 def open_for_reading(path: Path) -> tuple[sqlite3.Connection, bool]:
     """Open a file to read it; also return whether the connection will see what is written from now on.
 
     To read beside a writer SQLite keeps a small file of its own; where that cannot be made (the disk is full, the
     reader may not write there) and nothing waits in the write-ahead log, the file is read as it stands.
     """
-    connection = _open_read_only(path, "mode=ro")
+    connection = _open_read_only(path, f"mode=ro&vfs={_vfs(path)}")
     try:
         connection.execute("SELECT count(*) FROM sqlite_master").fetchone()
-    except sqlite3.OperationalError:
+    except sqlite3.OperationalError as error:
         connection.close()
+        if error.sqlite_errorcode == sqlite3.SQLITE_BUSY:  # another process writes it
+            return _open_read_only(path, "immutable=1"), False
         log = path.with_name(path.name + "-wal")
         if log.exists() and log.stat().st_size:
             raise
