@@ -5,6 +5,7 @@ import json
 import math
 import textwrap
 from collections.abc import Iterator, Sequence
+from dataclasses import replace
 from pathlib import Path
 from typing import Any, Final
 
@@ -116,7 +117,7 @@ def _moment(place: str, words: Sequence[str], row: Sequence[str]) -> Moment:
 
 
 def _as_json(given: Assessment) -> dict[str, Any]:
-    whole = payloads.assessment(given)
+    whole = payloads.assessment(replace(given, state_since=given.at))  # one moment has no state before it
     figures = {measurement: whole["figures"][measurement] for measurement in ("leg", "line", "converter", "earthing")}
     return {"angles": whole["angles"], "figures": figures, "remarks": whole["remarks"]}
 

@@ -11,7 +11,7 @@ from idlerwatch.core.settings.model import Settings
 from idlerwatch.core.watch.alarms import availability
 from idlerwatch.edges.files import load_settings
 
-WIDTH: Final = 88
+WIDTH: Final = 80
 _EXAMPLE = "\b\nExample:\n  idlerwatch check --settings /etc/idlerwatch/idlerwatch.toml"
 
 
@@ -30,7 +30,8 @@ def command(path: Path) -> None:
     for sentence in advise(settings):
         click.echo(textwrap.fill(f"- {sentence}", WIDTH, initial_indent="  ", subsequent_indent="    "))
     missing = [tag for tag, reason in availability(settings).items() if reason]
-    click.echo(f"\n{len(missing)} alarms of the list are not available here; `idlerwatch alarms` says which, and why.")
+    last = f"{len(missing)} alarms of the list are not available here; `idlerwatch alarms` says which, and why."
+    click.echo("\n" + textwrap.fill(last, WIDTH))
 
 
 def summary(settings: Settings) -> list[str]:
