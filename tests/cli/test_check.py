@@ -27,7 +27,7 @@ def words(result):
 def test_example_is_without_fault_and_fits_eighty_columns_in_a_pipe():
     result = run(EXAMPLE)
     assert result.exit_code == 0
-    assert "Wiring level 3" in result.output
+    assert "wiring level 3" in result.output
     assert all(len(line) <= 80 for line in result.output.splitlines())
     assert "\x1b" not in result.output
 

@@ -40,8 +40,8 @@ def summary(settings: Settings) -> list[str]:
     idlers = sum(idler.rated_kw for idler in settings.idler)
     lines = [
         f"{settings.site.name} / {settings.site.converter}: the settings are in order.",
-        f"Feed {supply.feed}, {supply.voltage:g} V, {supply.frequency:g} Hz, {supply.earthing}; {idlers:g} kW of idlers.",
-        f"Wiring level {wiring_level(settings)}.",
+        f"Feed {supply.feed}, {supply.voltage:g} V, {supply.frequency:g} Hz, {supply.earthing}.",
+        f"Idlers {idlers:g} kW; wiring level {wiring_level(settings)}.",
     ]
     for bus in settings.bus:
         meters = [meter.name for meter in settings.meter if meter.bus == bus.name]
