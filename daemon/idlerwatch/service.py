@@ -117,11 +117,17 @@ class Parts:
         self.journal.close()
 
 
-def build(settings: Settings, post: Callable[[Mail], None], runtime: Path, live: Sequence[Live] = ()) -> Parts:
+def build(
+    settings: Settings,
+    post: Callable[[Mail], None],
+    runtime: Path,
+    live: Sequence[Live] = (),
+    is_clock_right: Callable[[], bool] = is_synchronised,
+) -> Parts:
     """Make all parts of the daemon from its settings.
 
-    Trends wait for a clock that is right (or for ten minutes); messages do not: one whose stamp is wrong but which comes
-    now is worth more than one ten minutes late.
+    Trends wait for a clock that is right (or for ten minutes); messages do not: one that comes now with a wrong stamp is
+    worth more than one ten minutes late.
 
     Parameters
     ----------
@@ -133,6 +139,8 @@ def build(settings: Settings, post: Callable[[Mail], None], runtime: Path, live:
         Where the journal lies when the settings have none.
     live
         What shows assessments besides the ways out: the console.
+    is_clock_right
+        Whether stamps can be believed yet.
 
     Raises
     ------
@@ -143,7 +151,7 @@ def build(settings: Settings, post: Callable[[Mail], None], runtime: Path, live:
     def report(part: str) -> Callable[[str], None]:
         return lambda text: post(Trouble(Clock().monotonic(), part, text))
 
-    journal = _journal(settings, runtime, report("disk"))
+    journal = _journal(settings, runtime, report("disk"), is_clock_right)
     outlets: list[Outlet] = []
     shown = list(live)
     if settings.mqtt is not None:
@@ -151,13 +159,15 @@ def build(settings: Settings, post: Callable[[Mail], None], runtime: Path, live:
         names = (settings.site.name, settings.site.converter)
         mqtt = Mqtt(settings.mqtt, *names, password=secret, command=post, report=report("mqtt"))
         cursor = Cursor(journal.path, "mqtt", journal.last_sequence)
-        outlets.append(Outlet("event", journal, cursor, mqtt, report=report("mqtt")))
+        outlets.append(Outlet("event", journal, cursor, mqtt, report=lambda _: None))
         shown.append(mqtt)
     if settings.influx is not None:
         secret = _secret("influx", "token_file", settings.influx.token_file)
         influx = Influx(settings.influx, settings.site.name, settings.site.converter, token=secret, folder=journal.path)
         cursor = Cursor(journal.path, "influx", 0, INFLUX_CURSOR_S)
-        outlets.append(Outlet("window", journal, cursor, influx, report=report("influx"), is_ready=ClockWait()))
+        outlets.append(
+            Outlet("window", journal, cursor, influx, report=report("influx"), is_ready=ClockWait(is_clock_right))
+        )
     buses = [
         BusThread(
             bus,
@@ -165,16 +175,19 @@ def build(settings: Settings, post: Callable[[Mail], None], runtime: Path, live:
             settings.maps,
             post,
             lambda: post(BusDone()),
+            cycle_s=settings.site.cycle_s,
         )
         for bus in settings.bus
     ]
     return Parts(settings, journal, buses, outlets, shown)
 
 
-def _journal(settings: Settings, runtime: Path, report: Callable[[str], None]) -> Journal:
+def _journal(
+    settings: Settings, runtime: Path, report: Callable[[str], None], is_clock_right: Callable[[], bool]
+) -> Journal:
     if settings.journal is None:
         log.warning("no [journal] in the settings: only the last hour is kept, in %s", runtime)
-        return Journal(runtime, keep=RUNTIME_KEEP, report=report)
+        return Journal(runtime, keep=RUNTIME_KEEP, report=report, is_synchronised=is_clock_right)
     keep = Keep(settings.journal.keep_cycles_days, settings.journal.keep_windows_days)
     return Journal(
         settings.journal.path, settings.journal.commit_s, keep=keep, report=report, is_synchronised=is_synchronised
@@ -284,6 +297,9 @@ class Service:
         self._look_at_board(parts)
         given, self._given = self._given, []
         end = self._clock.cycle_end()
+        step = self._clock.take_step()
+        if step:
+            parts.journal.add_event("clock", {"step_s": step})
         for item in given:
             watch, _ = watch.take(item)
         watch, outputs = watch.take(end)

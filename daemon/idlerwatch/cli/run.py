@@ -5,13 +5,14 @@ import os
 import signal
 import sys
 import tempfile
+from collections.abc import Callable
 from pathlib import Path
 
 import click
 
 from idlerwatch.core.settings.faults import SettingsError
 from idlerwatch.core.settings.refusals import find_no_way_out
-from idlerwatch.edges.clock import Clock
+from idlerwatch.edges.clock import Clock, is_synchronised
 from idlerwatch.edges.files import load_settings
 from idlerwatch.service import Reload, Service, Stop, build
 
@@ -28,7 +29,10 @@ LOG_FORMAT = "%(levelname)s %(name)s: %(message)s"
     help="The settings file.",
 )
 @click.option("--quiet", is_flag=True, help="No console, whatever the output is.")
-def command(path: Path, *, quiet: bool) -> None:
+@click.option(
+    "--trust-clock", is_flag=True, help="Send trends at once: the clock is right at start (battery-backed, say)."
+)
+def command(path: Path, *, quiet: bool, trust_clock: bool) -> None:
     """Watch the converter until told to stop (SIGTERM, Ctrl-C); SIGHUP reads the settings again.
 
     Example: idlerwatch run --settings /etc/idlerwatch/idlerwatch.toml
@@ -39,10 +43,14 @@ def command(path: Path, *, quiet: bool) -> None:
         faults = find_no_way_out(settings)
         if faults:
             raise SettingsError(faults)
-    watch(path, quiet=quiet)
+    watch(path, _always if trust_clock else is_synchronised, quiet=quiet)
 
 
-def watch(path: Path, *, quiet: bool) -> None:
+def _always() -> bool:
+    return True
+
+
+def watch(path: Path, is_clock_right: Callable[[], bool], *, quiet: bool) -> None:
     """Run the service on a settings file, with a console where somebody looks."""
     live = []
     if not quiet and (sys.stdout.isatty() or "INVOCATION_ID" not in os.environ):
@@ -54,7 +62,7 @@ def watch(path: Path, *, quiet: bool) -> None:
         live = [Console(sys.stdout, title, settings.supply.labels)]
     service = Service(
         lambda number: load_settings(path, number),
-        lambda settings, post: build(settings, post, runtime_folder(), live),
+        lambda settings, post: build(settings, post, runtime_folder(), live, is_clock_right),
         Clock(),
     )
     for number in (signal.SIGTERM, signal.SIGINT):

@@ -1,0 +1,3 @@
+from servers import broker, influxd, victoria
+
+__all__ = ["broker", "influxd", "victoria"]
