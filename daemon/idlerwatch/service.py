@@ -126,8 +126,8 @@ def build(
 ) -> Parts:
     """Make all parts of the daemon from its settings.
 
-    Trends wait for a clock that is right (or for ten minutes); messages do not: one that comes now with a wrong stamp is
-    worth more than one ten minutes late.
+    Trends wait for a clock that is right (or for ten minutes); messages do not: one that comes now with a wrong stamp
+    is worth more than one ten minutes late.
 
     Parameters
     ----------

@@ -6,9 +6,8 @@ import os
 import signal
 import subprocess
 import sys
-import threading
 import time
-from collections.abc import Iterator, Mapping
+from collections.abc import Callable, Iterator, Mapping
 from pathlib import Path
 from typing import Any
 
@@ -24,7 +23,7 @@ class Phone:
     def __init__(self, port: int, topics: str = "idlerwatch/#") -> None:
         self.latest: dict[str, bytes] = {}
         self.messages: list[tuple[float, dict[str, Any]]] = []
-        self.came = threading.Event()
+        self.on_payload: Callable[[str, bytes], None] = lambda _level, _payload: None
         self._client = paho.Client(CallbackAPIVersion.VERSION2, client_id="phone", protocol=MQTTProtocolVersion.MQTTv5)
         self._client.on_message = self._on_message
         self._client.on_connect = lambda client, *_: client.subscribe(topics, qos=1)
@@ -37,7 +36,7 @@ class Phone:
         self.latest[level] = message.payload
         if level == "message":
             self.messages.append((time.monotonic(), json.loads(message.payload)))
-        self.came.set()
+        self.on_payload(level, message.payload)
 
     def of(self, tag: str) -> list[tuple[float, dict[str, Any]]]:
         return [(at, message) for at, message in self.messages if message["tag"] == tag]

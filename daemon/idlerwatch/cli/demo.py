@@ -5,7 +5,7 @@ import signal
 import sys
 import tempfile
 import threading
-from collections.abc import Mapping
+from collections.abc import Callable, Mapping
 from pathlib import Path
 from typing import Any, Final
 
@@ -15,7 +15,7 @@ from idlerwatch.cli.broker import Broker, Phone, start_broker
 from idlerwatch.core import payloads
 from idlerwatch.core.settings.model import Alarm, Journal, Mqtt, Settings
 from idlerwatch.core.values import AlarmEvent, Assessment
-from idlerwatch.edges.clock import Clock
+from idlerwatch.edges.clock import Clock, is_synchronised
 from idlerwatch.edges.console import Console
 from idlerwatch.edges.files import config_directory, load_settings, read_toml
 from idlerwatch.rig.build import build_plant
@@ -82,7 +82,13 @@ def shortened(alarm: Alarm) -> Alarm:
     return alarm.model_copy(update={"on_delay_s": shorter(alarm.on_delay_s), "off_delay_s": shorter(alarm.off_delay_s)})
 
 
-def play(settings: Settings, scenario: Scenario, broker: Broker, seconds: float | None) -> None:
+def play(
+    settings: Settings,
+    scenario: Scenario,
+    broker: Broker,
+    seconds: float | None,
+    is_clock_right: Callable[[], bool] = is_synchronised,
+) -> None:
     """Run the daemon on the rig until the time is over or somebody stops it, then say what reached the phone."""
     title = f"{settings.site.name} / {settings.site.converter} (virtual)"
     shown = _ByPhone(Console(sys.stdout, title, settings.supply.labels))
@@ -93,7 +99,9 @@ def play(settings: Settings, scenario: Scenario, broker: Broker, seconds: float 
     rig.start()
     on_ports = on_rig(settings, rig.ports)
     runtime = Path(settings.journal.path if settings.journal else ".")
-    service = Service(lambda _: on_ports, lambda given, post: build(given, post, runtime, [shown]), Clock())
+    service = Service(
+        lambda _: on_ports, lambda given, post: build(given, post, runtime, [shown], is_clock_right), Clock()
+    )
     topic = f"{payloads.prefix(settings.site.name, settings.site.converter)}/message"
     phone = Phone(broker, topic, shown.arrived)
     for number in (signal.SIGTERM, signal.SIGINT):

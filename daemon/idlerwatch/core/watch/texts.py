@@ -178,7 +178,7 @@ def _nominal(scene: Scene) -> float:
     feed = scene.settings.supply.as_feed
     conductors = scene.alarm.subject.upper()
     if conductors in LEGS:
-        return feed.nominal_voltage(Pair(conductors, "N"))  # type: ignore[arg-type]
+        return feed.nominal_voltage(Pair(conductors, "N"))
     try:
         return feed.nominal_voltage(read_pair(conductors))
     except ValueError:
