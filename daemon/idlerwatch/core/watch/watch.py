@@ -26,7 +26,7 @@ from idlerwatch.core.values import (
     Trouble,
     WindowRow,
 )
-from idlerwatch.core.watch.alarms import AlarmsState, begin_alarms, judge_alarms
+from idlerwatch.core.watch.alarms import AlarmsState, begin_alarms, judge_alarms, restore
 from idlerwatch.core.watch.align import AlignState, begin_align, step
 from idlerwatch.core.watch.assess import assess
 from idlerwatch.core.watch.compile import compile_plan
@@ -62,6 +62,10 @@ class Watch:
             alarms=begin_alarms(settings, standing),
             windows=begin_windows(plan.cycle_s),
         )
+
+    def with_standing(self, standing: tuple[StandingAlarm, ...]) -> "Watch":
+        """Return the watch with exactly these alarms standing: for a start, after the last minutes were fed."""
+        return replace(self, alarms=restore(self.alarms, standing))
 
     def take(self, event: Input) -> tuple["Watch", tuple[Output, ...]]:
         """Take one input; a cycle's end gives an assessment, then alarm events, then rows of closed windows."""
