@@ -200,3 +200,20 @@ def shed(folder: Path, port: str, broker: int, more: str = "", cycle_s: float = 
          commit_s: float = 1.0) -> str:  # fmt: skip
     places = {"port": port, "broker": broker, "journal": folder / "journal", "cycle_s": cycle_s, "baudrate": baudrate}
     return SHED.format(**places, commit_s=commit_s) + more
+
+
+def example(folder: Path, port: str, broker: int, more: str = "") -> str:
+    """Return the shipped example with the test's port, broker and journal, and without a database."""
+    text = (SOURCE.parent / "config" / "example.toml").read_text()
+    for key, value in {
+        'port = "/dev/idlerwatch"': f'port = "{port}"',
+        "port = 1883": f"port = {broker}",
+        'host = "localhost"': 'host = "127.0.0.1"',
+        'path = "/var/lib/idlerwatch"': f'path = "{folder / "journal"}"',
+        "commit_s = 30.0": "commit_s = 1.0",
+        "assessment_s = 1.0": "assessment_s = 0.0",
+    }.items():
+        assert key in text, f"the example has no {key}"
+        text = text.replace(key, value)
+    before, _, rest = text.partition("[influx]")
+    return before + "[journal]" + rest.partition("[journal]")[2] + more

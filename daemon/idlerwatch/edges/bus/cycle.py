@@ -150,6 +150,7 @@ class Cycle:
         asked = next(self._in_turn(silent), None)
         for one in silent:
             if one is not asked:
+                one.missed += 1
                 self._hand_over(one, MeterSilent(one.name, time.monotonic(), "not asked"))
         if asked is not None:
             self._probe(asked)

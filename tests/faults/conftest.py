@@ -1,0 +1,3 @@
+from servers import broker
+
+__all__ = ["broker"]
