@@ -9,6 +9,7 @@ from fakes.sheds import (
     SUPPLY_METER,
     build,
     cycles,
+    numbered,
     numbered_lines,
     running,
     said,
@@ -21,17 +22,8 @@ from fakes.sheds import (
 from idlerwatch.core.watch.align import begin_align, step
 from idlerwatch.core.watch.compile import compile_plan
 from idlerwatch.core.watch.derive import derive
-from idlerwatch.core.watch.life import (
-    CONFIRMATIONS,
-    FINDINGS,
-    STATES,
-    TABLE,
-    Evidence,
-    LifeState,
-    begin_life,
-    find,
-    judge_life,
-)
+from idlerwatch.core.watch.findings import CONFIRMATIONS, FINDINGS, STATES, TABLE
+from idlerwatch.core.watch.life import Evidence, LifeState, begin_life, find, judge_life
 
 SILENT = {"leg_2": "no answer", "leg_3": "no answer"}
 SURGE = supply_says(voltage=212.0, current=110.0, power=9000.0, reactive=21000.0)
@@ -448,6 +440,22 @@ def test_a_machine_left_on_does_not_keep_the_stopped_converter_running():
         leg_3=said(195.0, 0.0, 0.0, 0.0),
     )
     assert states(slipway(), (5, loaded(3.0)), (4, left_on))[-1] == "run-down"
+
+
+def test_a_motor_that_stalls_on_the_fed_legs_of_a_stopped_converter_is_no_start():
+    # 3 kW on L1-L2 of a split-phase supply, the idler isolated: 52 A standing still
+    half = {"voltage": 115.0, "current": 52.0, "power": 3000.0, "reactive": 5100.0}
+    stalled = {
+        "supply": numbered(half, half),
+        "lines": numbered(
+            {"voltage": 115.0, "current": 52.0, "power": 3000.0, "reactive": 5100.0},
+            {"voltage": 115.0, "current": 52.0, "power": 3000.0, "reactive": 5100.0},
+            {"voltage": 230.0},
+            {"current": 0.0},
+        ),
+    }
+    rest = split_running(current=0.0) | {"lines": numbered_lines(120.0, 120.0, 240.0)}
+    assert set(states(split_phase(), (3, rest), (5, stalled))) == {"stopped"}
 
 
 def test_a_machine_at_work_does_not_hide_the_idler():

@@ -2,7 +2,7 @@
 
 Each sample is put into one word, a *finding*: first by the supply's current (nothing, flowing, surging), which decides
 between "stopped" and "cable cut"; then by the voltages of the generated legs (dead, between, up); then by which meters
-sleep. A table (state x finding -> state) says what follows. No single sample moves the state on weak evidence: a
+sleep. The table of `findings` says what follows. No single sample moves the state on weak evidence: a
 finding must come as often in a row as `CONFIRMATIONS` says; the change then dates from the first of them.
 
 Where the supply's current flows and the generated legs' meters are silent the converter is unwatched: *blind*, never
@@ -14,80 +14,15 @@ the smallest two successive samples agree on: half of it is flow.
 """
 
 import math
-from collections.abc import Mapping
 from dataclasses import dataclass, replace
-from typing import Final, Literal
+from typing import Final
 
 from idlerwatch.core.values import ConverterState, Loading
 from idlerwatch.core.watch.derive import Derived
+from idlerwatch.core.watch.findings import CONFIRMATIONS, TABLE, Finding
 from idlerwatch.core.watch.plan import Plan
 
 NAN: Final = math.nan
-
-Finding = Literal["still", "coasting", "surging", "humming", "rising", "between", "turning", "unseen", "nothing"]
-"""What one sample says.
-
-========== ===========================================================================
-still      no supply current for the idler; generated legs dead, or their meters silent
-coasting   no supply current for the idler, yet generated legs carry voltage
-surging    a start's current (at rest from a lower one on), whatever a start capacitor makes of the legs
-humming    the supply's current flows; generated legs dead
-rising     the supply's current flows; generated legs between dead and up
-between    generated legs between dead and up; supply current not known
-turning    generated legs up
-unseen     the supply's current flows; the generated legs' meters are silent, none is booting
-nothing    nothing that decides
-========== ===========================================================================
-"""
-
-FINDINGS: Final[tuple[Finding, ...]] = (
-    "still",
-    "coasting",
-    "surging",
-    "humming",
-    "rising",
-    "between",
-    "turning",
-    "unseen",
-    "nothing",
-)
-STATES: Final[tuple[ConverterState, ...]] = ("stopped", "starting", "change-over", "running", "run-down", "blind")
-
-TABLE: Final[Mapping[ConverterState, Mapping[Finding, ConverterState]]] = {
-    "stopped": {
-        "still": "stopped", "coasting": "run-down", "surging": "starting", "humming": "stopped", "rising": "starting",
-        "between": "starting", "turning": "running", "unseen": "blind", "nothing": "blind",
-    },
-    "starting": {
-        "still": "change-over", "coasting": "change-over", "surging": "starting", "humming": "starting",
-        "rising": "starting", "between": "starting", "turning": "running", "unseen": "running", "nothing": "blind",
-    },
-    "change-over": {
-        "still": "stopped", "coasting": "change-over", "surging": "starting", "humming": "starting",
-        "rising": "starting", "between": "change-over", "turning": "running", "unseen": "running", "nothing": "blind",
-    },
-    # a lost leg or a deep sag does not stop a converter whose supply current flows
-    "running": {
-        "still": "run-down", "coasting": "run-down", "surging": "running", "humming": "running", "rising": "running",
-        "between": "run-down", "turning": "running", "unseen": "blind", "nothing": "blind",
-    },
-    # a lamp on the fed leg draws current while the legs die away: that is no start
-    "run-down": {
-        "still": "stopped", "coasting": "run-down", "surging": "starting", "humming": "stopped", "rising": "run-down",
-        "between": "run-down", "turning": "running", "unseen": "blind", "nothing": "blind",
-    },
-    "blind": {
-        "still": "stopped", "coasting": "run-down", "surging": "starting", "humming": "blind", "rising": "starting",
-        "between": "blind", "turning": "running", "unseen": "blind", "nothing": "blind",
-    },
-}  # fmt: skip
-"""The state machine: state x finding -> state."""
-
-CONFIRMATIONS: Final[Mapping[Finding, int]] = {
-    "still": 2, "coasting": 2, "surging": 2, "humming": 2, "rising": 2, "between": 2, "turning": 2, "unseen": 3,
-    "nothing": 3,
-}  # fmt: skip
-"""How many samples in a row must find the same before the state moves. Two witnesses in one sample count as two."""
 
 AT_REST: Final = frozenset({"stopped", "starting", "change-over", "run-down"})
 """States in which the supply has no load to feed, so that a smaller current is a start's."""
@@ -208,11 +143,11 @@ def find(plan: Plan, state: LifeState, evidence: Evidence) -> Finding:
         return "coasting" if evidence.generated >= DEAD else "still"
     if math.isnan(evidence.current):
         return _by_voltages(evidence)
-    if evidence.current >= plan.levels.surge:
+    if evidence.idler_current >= plan.levels.surge:
         return "surging"
     if evidence.generated >= UP:
         return "turning"
-    if evidence.current >= plan.levels.start and state.state in AT_REST:
+    if evidence.idler_current >= plan.levels.start and state.state in AT_REST:
         return "surging"
     if math.isnan(evidence.generated):
         return _by_meters(plan, evidence)
