@@ -65,6 +65,7 @@ class VirtualMeter:
     _sums: list[_Sums] = field(default_factory=list)
     _since: float = 0.0
     _fed_at: float | None = None
+    _has_begun: bool = False
     _energies: dict[int, float] = field(default_factory=dict)
     _picture: dict[RegisterKey, int] = field(default_factory=dict)
     _is_silent: bool = True
@@ -96,6 +97,7 @@ class VirtualMeter:
     def feed(self, view: View, converter: int = 0) -> None:
         """Take one instant of the plant."""
         alive_for = self._alive_for(view, converter)
+        self._has_begun = True
         if alive_for is None:
             self._fed_at = None
             self._sums = [_Sums() for _ in self.settings.channels]
@@ -113,7 +115,8 @@ class VirtualMeter:
         if pair is not None and _across(view, self.settings.at, pair, converter) < self.settings.usable_from_volts:
             return None
         if self._fed_at is None:
-            self._fed_at = view.time
+            # what has its supply when the rig begins has had it for long
+            self._fed_at = view.time if self._has_begun else -math.inf
         return view.time - self._fed_at if pair is not None else math.inf
 
     def _add(self, channel: Channel, sums: _Sums, view: View, converter: int) -> None:

@@ -49,13 +49,13 @@ def begin(plant: Plant) -> State:
 
 
 def no_orders(plant: Plant) -> Orders:
-    """Return everything switched off, machines working at less than half load once they run."""
+    """Return everything switched off, machines at light work once they run."""
     n, motors, loads = plant.count, len(plant.motors.names), len(plant.loads.names)
     return Orders(
         run=np.zeros(n, dtype=bool),
         backwards=np.zeros(n, dtype=bool),
         motor_on=np.zeros((n, motors), dtype=bool),
-        motor_load=np.full((n, motors), 0.4),
+        motor_load=np.full((n, motors), 0.25),
         load_on=np.zeros((n, loads), dtype=bool),
         bank_by_hand=np.zeros((n, len(plant.banks.names)), dtype=bool),
     )

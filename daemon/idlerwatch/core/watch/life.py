@@ -63,6 +63,7 @@ class LifeState:
     """The state of the converter and what is remembered to judge the next sample."""
 
     state: ConverterState = "blind"
+    last_seen: ConverterState = "stopped"
     since: float = NAN
     last_at: float = NAN
     finding: Finding = "nothing"
@@ -210,11 +211,14 @@ def _move(plan: Plan, state: LifeState, at: float, evidence: Evidence) -> LifeSt
         state = replace(state, since=at)
     if following == state.state or not _is_confirmed(plan, state, at):
         return _learn_idle(plan, state, evidence)
-    return replace(state, state=following, since=_changed_at(state), last_current=NAN)
+    seen = state.last_seen if following == "blind" else following
+    return replace(state, state=following, last_seen=seen, since=_changed_at(state), last_current=NAN)
 
 
 def _following(state: LifeState, at: float) -> ConverterState:
     following = TABLE[state.state][state.finding]
+    if state.state == "blind" and state.finding == "surging" and state.last_seen == "running":
+        return "blind"  # lost sight of while it ran: what surges is a machine
     if following == state.state == "change-over" and at - state.since > CHANGE_OVER_S:
         return "run-down"
     return following
@@ -283,8 +287,9 @@ def _or(value: float, otherwise: float) -> float:
 
 def _starts(plan: Plan, state: LifeState, evidence: Evidence) -> bool:
     """Return whether currents stand a machine's starting current above what they were before."""
-    if not math.isnan(evidence.leg_current):
-        return evidence.leg_current - _or(state.usual_leg_current, evidence.leg_current) >= plan.levels.machine_surge
+    leg_step = evidence.leg_current - state.usual_leg_current
+    if not math.isnan(leg_step):
+        return leg_step >= plan.levels.machine_surge
     if evidence.current >= plan.levels.surge:
         return True
     step = evidence.current - _or(state.usual_supply_current, evidence.current)
