@@ -6,6 +6,7 @@ capacitors that differ from their marking, a volt of others' load on the neutral
 """
 
 import cmath
+import math
 from dataclasses import replace
 from typing import Final
 
@@ -68,7 +69,7 @@ def _source(settings: Settings, count: int) -> Source:
 
 
 def _rated_current(kilowatts: float, line_voltage: float) -> float:
-    return kilowatts * 1e3 / (np.sqrt(3.0) * line_voltage * 0.87 * 0.82)
+    return kilowatts * 1e3 / (math.sqrt(3.0) * line_voltage * 0.87 * 0.82)
 
 
 def _idler(settings: Settings, chance: np.random.Generator, count: int) -> Induction:

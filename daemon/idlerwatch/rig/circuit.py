@@ -6,11 +6,13 @@
                 B3 --------- T3                    S  the idler's star point
        bond --- N  --[star]- S                     N  the converter's neutral bar
 
-A fed leg passes straight through to the machines, converter on or off; the contactor K isolates the idler from it. Earth
-at the bond is the reference. Open switches are a billion ohms, so nothing is ever singular; each node also has ten
-megohms to earth, as a meter and insulation would.
+A fed leg passes straight through to the machines, converter on or off; the contactor K isolates the idler from it.
+Earth at the bond is the reference. Open switches are a billion ohms, so nothing is ever singular; each node also has
+ten megohms to earth, as a meter and insulation would.
 """
 
+import itertools
+from collections.abc import Sequence
 from dataclasses import dataclass
 from typing import Final
 
@@ -18,6 +20,7 @@ import numpy as np
 
 from idlerwatch.core.converter import network
 from idlerwatch.core.converter.network import Complexes, Floats
+from idlerwatch.core.electrical.sequence import TO_PHASORS
 from idlerwatch.rig import machine
 from idlerwatch.rig.values import OPEN, Faults, Loads, Orders, Phase, Plant, State
 
@@ -37,8 +40,8 @@ class Solution:
     """Potentials (n, 11), the electrical frequency (n,) and whether the idler coasts (n,), and what flows.
 
     `source` (n, 3) from the utility, `supply` (n, 3) of it past the base load, `out` (n, 3) through the leg meters,
-    `bank` (n, b, 4), `motor` (n, m, 3), `load` (n, l, 4), `idler` (n, 3) into its windings, `winding` (n, 3) the voltage
-    across them, `motor_voltage` (n, m, 3).
+    `bank` (n, b, 4), `motor` (n, m, 3), `load` (n, l, 4), `idler` (n, 3) into its windings, `winding` (n, 3) the
+    voltage across them, `motor_voltage` (n, m, 3).
     """
 
     nodes: Complexes
@@ -87,10 +90,10 @@ def solve(plant: Plant, state: State, orders: Orders, faults: Faults) -> Solutio
     idler, idler_source = _idler(plant, state, faults, coasts, frequency)
     banks = _banks(plant, state, faults, frequency)
     motors = _motors(plant, state, orders, faults, frequency)
-    matrix[:, *np.ix_(_IDLER_NODES, _IDLER_NODES)] += idler
+    matrix += _spread(idler, _IDLER_NODES)
     injections[:, _IDLER_NODES] += idler_source
-    matrix[:, *np.ix_(_BANK_NODES, _BANK_NODES)] += banks.sum(axis=1)
-    matrix[:, *np.ix_(MACHINE, MACHINE)] += motors.sum(axis=1)
+    matrix += _spread(banks.sum(axis=1), _BANK_NODES)
+    matrix += _spread(motors.sum(axis=1), MACHINE)
     nodes = network.solve_nodes(matrix, injections)
     at_machines = nodes[:, None, list(MACHINE)]
     motor = _times(motors, at_machines)
@@ -109,6 +112,14 @@ def solve(plant: Plant, state: State, orders: Orders, faults: Faults) -> Solutio
         winding=nodes[:, list(TERMINAL)] - faults.lead_resistance * through_idler[:, :3] - nodes[:, [STAR]],
         motor_voltage=at_machines - faults.motor_resistance * motor,
     )
+
+
+def _spread(block: Complexes, nodes: Sequence[int]) -> Complexes:
+    """Return a block of admittances (n, k, k) at its nodes in the whole circuit (n, 11, 11)."""
+    rows = np.asarray(nodes)
+    whole = np.zeros((len(block), NODES, NODES), dtype=np.complex128)
+    whole[:, rows[:, None], rows] = block
+    return whole
 
 
 def coasting(plant: Plant, state: State, faults: Faults) -> np.ndarray:
@@ -221,8 +232,8 @@ def _idler(
     matrix = machine.windings(idler, machine.zero_admittance(idler, frequency), y_positive, y_negative)
     leads = np.concatenate([faults.lead_resistance, np.zeros((plant.count, 1))], axis=1)
     seen = network.behind_impedances(network.with_terminal(matrix), leads)
-    column = np.where(forwards[:, None], network.SEQUENCES[:, 1], network.SEQUENCES[:, 2])
-    force = column * (np.where(coasts, state.emf, 0.0) * frequency)[:, None]
+    column = np.where(forwards[:, None], TO_PHASORS[:, 1], TO_PHASORS[:, 2])
+    force = np.asarray(column * (np.where(coasts, state.emf, 0.0) * frequency)[:, None], dtype=np.complex128)
     return seen, _times(seen[:, :, :3], force)
 
 
@@ -281,10 +292,10 @@ def _loads(plant: Plant, state: State, orders: Orders) -> _Branch:
             across = np.abs(state.nodes[:, [6, 7, 8]] - state.nodes[:, [7, 8, 6]]) / nominal
             shares = across**8 / np.maximum((across**8).sum(1, keepdims=True), 1e-6)
             draws = np.clip(shares * watts[:, None] / np.maximum(across, 0.5) ** 2, 0.0, None) * (1.0 - 0.33j)
-            columns.append(draws / nominal**2)
+            columns.append(np.asarray(draws / nominal**2, dtype=np.complex128))
         else:
             declared = plant.feed.leg_voltage if 3 in pair else nominal
-            columns.append((watts / declared**2 * (1.0 - 0.75j))[:, None])
+            columns.append(np.asarray((watts / declared**2 * (1.0 - 0.75j))[:, None], dtype=np.complex128))
     empty = np.zeros((plant.count, 0), dtype=np.complex128)
     return _Branch.of(pairs, np.concatenate([empty, *columns], axis=1), plant.count)
 
@@ -292,5 +303,5 @@ def _loads(plant: Plant, state: State, orders: Orders) -> _Branch:
 def _load_currents(loads: Loads, branch: _Branch, nodes: Complexes) -> Complexes:
     flows = branch.currents(nodes)[..., None] * network.incidence(NODES, branch.pairs)[:, _LOAD_NODES]
     starts = np.cumsum([0, *(3 if pair is None else 1 for pair in loads.pairs)])
-    groups = [flows[:, a:b].sum(axis=1) for a, b in zip(starts[:-1], starts[1:], strict=True)]
+    groups = [flows[:, a:b].sum(axis=1) for a, b in itertools.pairwise(starts.tolist())]
     return np.stack(groups, axis=1) if groups else np.zeros((len(nodes), 0, 4), dtype=np.complex128)

@@ -22,11 +22,11 @@ from idlerwatch.core.converter.network import Complexes, Floats, winding_matrix
 
 @dataclass(frozen=True, slots=True)
 class Induction:
-    """Constants a star phase, arrays of one shape (...); `asymmetry` (..., 3) is each winding's admittance over the mean.
+    """Constants a star phase, arrays of one shape (...).
 
-    `saturation` b in Xm = Xm0 g(1)/g(e), g(e) = 1 + b max(0, e - 0.95)^2, e the airgap flux over the rated one.
-    `deep_bar` k in Rr (1 + k sqrt(rotor frequency ratio)). `kinetic_energy` at synchronous speed. [J]
-    `friction` at synchronous speed. [W]
+    `asymmetry` (..., 3) is each winding's admittance over the mean. `saturation` b in Xm = Xm0 g(1)/g(e), g(e) = 1 +
+    b max(0, e - 0.95)^2, e the airgap flux over the rated one. `deep_bar` k in Rr (1 + k sqrt(rotor frequency
+    ratio)). `kinetic_energy` at synchronous speed. [J] `friction` at synchronous speed. [W]
     """
 
     rated_voltage: Floats
@@ -43,7 +43,7 @@ class Induction:
     rated_power: Floats
     asymmetry: Floats
 
-    def part(self, index: object) -> "Induction":
+    def part(self, index: slice) -> "Induction":
         """Return the machines at an index of the leading axes."""
         return replace(self, **{f.name: np.asarray(getattr(self, f.name))[index] for f in fields(self)})
 
@@ -118,7 +118,8 @@ def _branches(machine: Induction, speed: Floats, frequency: Floats, magnetising:
     rotor = slip / (resistance + 1j * slip * frequency * machine.rotor_reactance)
     airgap = 1.0 / (rotor + 1.0 / (1j * frequency * magnetising))
     stator = machine.stator_resistance + 1j * frequency * machine.stator_reactance
-    return Branches(1.0 / (stator + airgap), rotor, stator)
+    phase = np.asarray(1.0 / (stator + airgap), dtype=np.complex128)
+    return Branches(phase, np.asarray(rotor, dtype=np.complex128), stator)
 
 
 def phase_branches(machine: Induction, speed: Floats, frequency: Floats, flux: Floats) -> tuple[Branches, Branches]:

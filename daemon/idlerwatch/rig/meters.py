@@ -1,10 +1,10 @@
 """Virtual meters: what inexpensive meters make of the plant, through the registers of any settings' maps.
 
-A meter averages over its refresh interval, then shows a new picture: with the gain errors of its channels (fixed, within
-its class), a little noise, and the steps of its registers. It lives on the pair its settings name: below its least
-voltage it is silent, and when the voltage is back it says nothing for half of its boot time and nonsense (zeros, then
-halves) for the rest. Reactive power comes out signed, unsigned or not at all, line voltages computed from 120 degrees
-where the map says so.
+A meter averages over its refresh interval, then shows a new picture: with the gain errors of its channels (fixed,
+within its class), a little noise, and the steps of its registers. It lives on the pair its settings name: below its
+least voltage it is silent, and when the voltage is back it says nothing for half of its boot time and nonsense
+(zeros, then halves) for the rest. Reactive power comes out signed, unsigned or not at all, line voltages computed
+from 120 degrees where the map says so.
 """
 
 import math
@@ -17,7 +17,7 @@ import numpy as np
 
 from idlerwatch.core.conductors import LEGS, Pair
 from idlerwatch.core.registers import RegisterKey, RegisterMap, Table, image
-from idlerwatch.core.settings.model import Channel, Contact, Meter, Settings
+from idlerwatch.core.settings.model import Accuracy, Channel, Contact, Meter, Settings
 from idlerwatch.rig.line import Device, ModbusExceptionCode
 from idlerwatch.rig.values import View
 
@@ -229,8 +229,8 @@ def devices_of(meters: Mapping[int, VirtualMeter]) -> dict[int, Device]:
     return dict(meters)
 
 
-def _limits(accuracy: object) -> tuple[float, float, float]:
-    return tuple(getattr(accuracy, name) for name in ("voltage", "current", "power"))  # type: ignore[return-value]
+def _limits(accuracy: Accuracy) -> tuple[float, float, float]:
+    return accuracy.voltage, accuracy.current, accuracy.power
 
 
 def _across(view: View, place: str, pair: Pair, converter: int) -> float:
@@ -239,7 +239,7 @@ def _across(view: View, place: str, pair: Pair, converter: int) -> float:
 
 def _half(figures: Figures, share: float) -> Figures:
     """Return what a meter shows while it boots: nothing at first, then half of the truth."""
-    factor = 0.0 if share < 0.75 else 0.5  # noqa: PLR2004
+    factor = 0.0 if share < 0.75 else 0.5
     return {key: value * factor for key, value in figures.items()}
 
 

@@ -13,7 +13,8 @@ from typing import Final
 
 import numpy as np
 
-from idlerwatch.core.converter.network import SEQUENCES, Complexes, Floats
+from idlerwatch.core.converter.network import Complexes, Floats
+from idlerwatch.core.electrical.sequence import TO_COMPONENTS
 from idlerwatch.rig import machine
 from idlerwatch.rig.circuit import BUS, MACHINE, NEUTRAL, NODES, TERMINAL, Solution, solve, starter_ratio
 from idlerwatch.rig.values import Booleans, Faults, Integers, Orders, Phase, Plant, State, View
@@ -22,7 +23,6 @@ STEP_S: Final = 0.02
 LETS_GO_BELOW: Final = 0.5
 LETS_GO_AFTER_S: Final = 0.1
 STANDS_BELOW: Final = 0.02
-_TO_SEQUENCES: Final[Complexes] = np.conj(SEQUENCES.T) / 3.0
 _FLUX_FOLLOWS: Final = 0.5
 
 
@@ -83,7 +83,8 @@ def step(plant: Plant, state: State, orders: Orders, faults: Faults, seconds: fl
     """Return the plant one step later, and the circuit as it was during the step."""
     solution = solve(plant, state, orders, faults)
     moved = _controlled(plant, state, orders, solution, seconds)
-    moved = _banks_moved(plant, moved, orders, faults, solution, seconds)
+    called = _called(plant, moved, orders) & _has_voltage(plant, moved, solution)
+    moved = _banks_moved(plant, moved, faults, called, seconds)
     moved = _idler_turned(plant, moved, state, solution, seconds)
     moved = _motors_turned(plant, moved, orders, solution, seconds)
     return replace(moved, time=state.time + seconds, nodes=solution.nodes), solution
@@ -130,12 +131,10 @@ def _next_phase(plant: Plant, state: State, held: Booleans, since: Floats) -> In
     return np.select([chosen for chosen, _ in choices], [int(phase) for _, phase in choices], state.phase)
 
 
-def _banks_moved(
-    plant: Plant, state: State, orders: Orders, faults: Faults, solution: Solution, seconds: float
-) -> State:
+def _banks_moved(plant: Plant, state: State, faults: Faults, called: Booleans, seconds: float) -> State:
     if not plant.banks.names:
         return state
-    wanted = _called(plant, state, orders) & _has_voltage(plant, state, solution) & ~faults.coil_open
+    wanted = called & ~faults.coil_open
     moving = np.where(wanted == state.bank_closed, 0.0, state.bank_moving_for + seconds)
     arrived = moving >= plant.banks.operating_time
     closed = np.where(arrived, wanted, state.bank_closed)
@@ -156,17 +155,18 @@ def _called(plant: Plant, state: State, orders: Orders) -> Booleans:
 def _has_voltage(plant: Plant, state: State, solution: Solution) -> Booleans:
     """Return whether each coil has enough voltage to pull in, or to hold where it is in: (n, b)."""
     nodes = [*TERMINAL, NEUTRAL]
-    columns = []
+    columns = [np.zeros((plant.count, 0), dtype=bool)]
     for bank, coil in enumerate(plant.banks.coil):
         if coil is None:
-            columns.append(_supply_ratio(plant, solution) > LETS_GO_BELOW)
+            columns.append((_supply_ratio(plant, solution) > LETS_GO_BELOW)[:, None])
             continue
         across = np.abs(solution.nodes[:, nodes[coil[0]]] - solution.nodes[:, nodes[coil[1]]])
         ratio = across / plant.banks.coil_voltage[bank]
-        columns.append(
-            np.where(state.bank_closed[:, bank], ratio > plant.banks.drop_out[bank], ratio > plant.banks.pull_in[bank])
+        holds = np.where(
+            state.bank_closed[:, bank], ratio > plant.banks.drop_out[bank], ratio > plant.banks.pull_in[bank]
         )
-    return np.stack(columns, axis=1)
+        columns.append(holds[:, None])
+    return np.concatenate(columns, axis=1)
 
 
 # --------------------------------------------------------------------------
@@ -176,8 +176,8 @@ def _has_voltage(plant: Plant, state: State, solution: Solution) -> Booleans:
 
 def _idler_turned(plant: Plant, state: State, before: State, solution: Solution, seconds: float) -> State:
     idler, frequency = plant.idler, solution.frequency
-    voltage = solution.winding @ _TO_SEQUENCES.T
-    current = solution.idler @ _TO_SEQUENCES.T
+    voltage = solution.winding @ TO_COMPONENTS.T
+    current = solution.idler @ TO_COMPONENTS.T
     own = np.where(before.speed >= 0.0, 1, 2)
     rows = np.arange(plant.count)
     v_own, i_own = voltage[rows, own], current[rows, own]
@@ -224,7 +224,7 @@ def _motors_turned(plant: Plant, state: State, orders: Orders, solution: Solutio
         return state
     motors = plant.motors.constants
     frequency = np.broadcast_to(solution.frequency[:, None], state.motor_speed.shape)
-    voltage = solution.motor_voltage @ _TO_SEQUENCES.T
+    voltage = solution.motor_voltage @ TO_COMPONENTS.T
     positive, _ = machine.phase_branches(motors, state.motor_speed, frequency, state.motor_flux)
     driven = machine.torque(motors, state.motor_speed, frequency, state.motor_flux, (voltage[..., 1], voltage[..., 2]))
     driven = np.where(orders.motor_on, driven * starter_ratio(plant, state), 0.0)

@@ -6,13 +6,13 @@ from collections.abc import Callable, Mapping
 from dataclasses import dataclass, replace
 from typing import Final
 
+from idlerwatch.core.registers import Table
 from idlerwatch.core.settings.model import Bus, Settings
 from idlerwatch.rig.build import build_plant
 from idlerwatch.rig.line import Device, Line, ModbusExceptionCode
 from idlerwatch.rig.meters import VirtualMeter, virtual_meters
 from idlerwatch.rig.plant import STEP_S, begin, look, no_faults, no_orders, pulled_backwards, step
 from idlerwatch.rig.scenario import Course, Event, Scenario, play
-from idlerwatch.rig.values import Plant
 
 FARTHEST_BEHIND_S: Final = 0.5
 """A rig that falls behind by more lets that time pass unseen instead of hurrying after it."""
@@ -23,16 +23,12 @@ class _Silenced:
     """A meter that can be silenced by the scenario, as by a cut cable."""
 
     meter: VirtualMeter
+    answer_delay_s: float
     is_silent: bool = False
 
-    @property
-    def answer_delay_s(self) -> float:
-        """How long the meter thinks. [s]"""
-        return self.meter.answer_delay_s
-
-    def read(self, table: str, address: int, count: int) -> list[int] | ModbusExceptionCode | None:
+    def read(self, table: Table, address: int, count: int) -> list[int] | ModbusExceptionCode | None:
         """Return what the meter says, None while it is silenced."""
-        return None if self.is_silent else self.meter.read(table, address, count)  # type: ignore[arg-type]
+        return None if self.is_silent else self.meter.read(table, address, count)
 
 
 class Rig:
@@ -51,10 +47,12 @@ class Rig:
     def __init__(self, settings: Settings, scenario: Scenario, say: Callable[[Event], None] = lambda _: None) -> None:
         self._scenario = scenario
         self._say = say
-        self._plant: Plant = build_plant(settings, scenario.seed)
+        self._plant = build_plant(settings, scenario.seed)
         meters = virtual_meters(settings, scenario.seed)
         self._meters = {
-            meter.settings.name: _Silenced(meter) for on_bus in meters.values() for meter in on_bus.values()
+            meter.settings.name: _Silenced(meter, meter.answer_delay_s)
+            for on_bus in meters.values()
+            for meter in on_bus.values()
         }
         self._lines = {bus.name: self._line(bus, meters[bus.name]) for bus in settings.bus}
         self._is_over = threading.Event()

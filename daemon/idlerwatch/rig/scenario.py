@@ -145,7 +145,7 @@ def _run(on: object) -> Callable[[Course, Event, Plant], Course]:
 
 
 def _backwards(course: Course, _: Event, plant: Plant) -> Course:
-    return replace(_orders(course, run=np.full(plant.count, True)), pulled_backwards=True)  # noqa: FBT003
+    return replace(_orders(course, run=np.full(plant.count, True)), pulled_backwards=True)
 
 
 def _machine(on: object) -> Callable[[Course, Event, Plant], Course]:

@@ -78,7 +78,7 @@ class Capacitors:
 
 @dataclass(frozen=True, slots=True)
 class Banks:
-    """Contactors: `wanted` (b, 5) says in which phases the control calls for each; `coil` the pair its coil hangs on."""
+    """Contactors: `wanted` (b, 5) says in which phases the control calls for each, `coil` on which pair it hangs."""
 
     names: tuple[str, ...]
     wanted: Booleans
@@ -203,8 +203,8 @@ class State:
 class View:
     """All that could be measured at one instant.
 
-    `potentials` and `currents` map a place (``supply``, ``leg``, ``earth``, ``bank:NAME``, ``machine:NAME``) to (n, 5) and
-    (n, 4) phasors. Currents are positive into the converter at the supply, else outwards: to the machines, into the
+    `potentials` and `currents` map a place (``supply``, ``leg``, ``earth``, ``bank:NAME``, ``machine:NAME``) to phasors
+    (n, 5) and (n, 4). Currents are positive into the converter at the supply, else outwards: to the machines, into the
     bank. `generated_frequency` is that of the idler's voltage. [ratio to the supply's]
     """
 

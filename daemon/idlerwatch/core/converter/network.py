@@ -7,26 +7,15 @@ The winding matrix is that of symmetrical components (C. L. Fortescue, 1918): Y 
 a = exp(j 2 pi/3), for the sequence L1-L2-L3.
 """
 
-import cmath
-import math
 from collections.abc import Sequence
-from typing import Final
 
 import numpy as np
 from numpy.typing import NDArray
 
+from idlerwatch.core.electrical.sequence import TO_COMPONENTS, TO_PHASORS
+
 Complexes = NDArray[np.complex128]
 Floats = NDArray[np.float64]
-
-OPERATOR: Final = cmath.exp(2j * math.pi / 3.0)
-"""The operator a, a third of a turn."""
-
-SEQUENCES: Final[Complexes] = np.array(
-    [[1.0, 1.0, 1.0], [1.0, OPERATOR**2, OPERATOR], [1.0, OPERATOR, OPERATOR**2]], dtype=np.complex128
-)
-"""The matrix A: columns zero, positive, negative sequence; rows L1, L2, L3."""
-
-_INVERSE: Final[Complexes] = np.conj(SEQUENCES.T) / 3.0
 
 
 def winding_matrix(sequence_admittances: Complexes) -> Complexes:
@@ -45,10 +34,11 @@ def winding_matrix(sequence_admittances: Complexes) -> Complexes:
     Examples
     --------
     >>> y = winding_matrix(np.array([0.0, 2.0 - 3.0j, 2.0 - 3.0j]))
-    >>> bool(np.allclose(y @ np.array([1.0, OPERATOR**2, OPERATOR]), (2 - 3j) * np.array([1.0, OPERATOR**2, OPERATOR])))
+    >>> positive = TO_PHASORS[:, 1]
+    >>> bool(np.allclose(y @ positive, (2.0 - 3.0j) * positive))
     True
     """
-    matrix: Complexes = (SEQUENCES * sequence_admittances[..., None, :]) @ _INVERSE
+    matrix: Complexes = (TO_PHASORS * sequence_admittances[..., None, :]) @ TO_COMPONENTS
     return matrix
 
 
