@@ -18,13 +18,15 @@ SOURCE = Path(__file__).resolve().parents[2] / "daemon"
 
 
 class Phone:
-    """Subscribes to everything of a site; keeps the newest payload of each topic, and each message with its instant."""
+    """Subscribes to everything of a site; keeps the newest payload of each topic, and all messages."""
 
     def __init__(self, port: int, topics: str = "idlerwatch/#") -> None:
         self.latest: dict[str, bytes] = {}
         self.messages: list[tuple[float, dict[str, Any]]] = []
         self.on_payload: Callable[[str, bytes], None] = lambda _level, _payload: None
-        self._client = paho.Client(CallbackAPIVersion.VERSION2, client_id="listener", protocol=MQTTProtocolVersion.MQTTv5)
+        self._client = paho.Client(
+            CallbackAPIVersion.VERSION2, client_id="listener", protocol=MQTTProtocolVersion.MQTTv5
+        )
         self._client.on_message = self._on_message
         self._client.on_connect = lambda client, *_: client.subscribe(topics, qos=1)
         self._client.connect_async("127.0.0.1", port)

@@ -34,8 +34,6 @@ from idlerwatch.core.electrical.unbalance import line_voltage_unbalance_rate
 def test_derating_is_that_of_the_published_curve(percent, factor, tolerance):
     found = float(derating_factor(np.array(percent / 100.0), NEMA_DERATING))
     assert found == pytest.approx(factor, abs=tolerance + 1e-9)
-        factor, abs=tolerance + 1e-9
-    )
 
 
 def test_no_motor_should_run_beyond_the_curve():

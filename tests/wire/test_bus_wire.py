@@ -1,4 +1,4 @@
-"""The bus thread on real ports against an independent Modbus slave (pymodbus): a tty, and a serial adapter on a network.
+"""The bus thread on real ports against an independent Modbus slave (pymodbus): a tty, and an adapter on a network.
 
 A pseudo-terminal has no pace and no framing errors; those are the virtual line's business.
 """
