@@ -152,6 +152,6 @@ if [ "$dry" = no ]; then
     say "
 Next:
   1. edit $etc/idlerwatch.toml
-  2. idlerwatch check $etc/idlerwatch.toml
+  2. idlerwatch check --settings $etc/idlerwatch.toml
   3. systemctl start idlerwatch; journalctl -fu idlerwatch"
 fi

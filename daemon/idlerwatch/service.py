@@ -197,7 +197,7 @@ def _journal(
 def _secret(table: str, key: str, file: str | None) -> str | None:
     credential = f"{table}-{key.removesuffix('_file')}"
     try:
-        return systemd.read_secret(credential, file)
+        return systemd.read_secret(credential, file) or None
     except OSError as error:
         fault = Fault(f"{table}.{key}", f"{file!r} ({error.strerror})", "must be a file that can be read")
         raise SettingsError([fault]) from error

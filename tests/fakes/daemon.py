@@ -208,7 +208,7 @@ def example(folder: Path, port: str, broker: int, more: str = "") -> str:
     """Return the shipped example with the test's port, broker and journal, and without a database."""
     text = (SOURCE.parent / "config" / "example.toml").read_text()
     for key, value in {
-        'port = "/dev/idlerwatch"': f'port = "{port}"',
+        'port = "/dev/idlerwatch/12345678"': f'port = "{port}"',
         "port = 1883": f"port = {broker}",
         'host = "localhost"': 'host = "127.0.0.1"',
         'path = "/var/lib/idlerwatch"': f'path = "{folder / "journal"}"',
