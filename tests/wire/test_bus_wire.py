@@ -169,8 +169,7 @@ def rfc2217_port():
         def serve():
             connection, _ = server.accept()
             connection.setsockopt(socket.IPPROTO_TCP, socket.TCP_NODELAY, 1)
-            with connection:
-                far = connection.makefile("wb", buffering=0)
+            with connection, connection.makefile("wb", buffering=0) as far:
                 manager = rfc2217.PortManager(Adapter(), far)
                 while not over.is_set():
                     readable, _, _ = select.select([connection, speaking], [], [], 0.05)

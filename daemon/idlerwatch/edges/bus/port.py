@@ -24,6 +24,8 @@ from idlerwatch.core.settings.model import Bus
 POLL_S: Final = 0.02
 GAP_S: Final = 0.03
 """An answer may pause this long: adapters hand over what they received every 16 ms."""
+WRITE_S: Final = 1.0
+"""Longer than any request takes: a port that does not take it in is lost."""
 STRAY_BYTES: Final = 4096
 """More than this before a request is noise, and dropped."""
 PORT_LOST: Final = (serial.SerialException, termios.error, OSError)
@@ -57,8 +59,10 @@ def character_bits(bus: Bus) -> int:
 def open_port(bus: Bus) -> "RtuPort":
     """Open a bus's port. Raises one of `PORT_LOST` where it is not there."""
     line = {"baudrate": bus.baudrate, "parity": _PARITY[bus.parity], "stopbits": bus.stopbits}
+    if not bus.port.startswith("rfc2217://"):  # which knows no such time-out
+        line["write_timeout"] = WRITE_S
     try:
-        opened = serial.serial_for_url(bus.port, timeout=POLL_S, write_timeout=1.0, **line)
+        opened = serial.serial_for_url(bus.port, timeout=POLL_S, **line)
     except ValueError as error:
         raise serial.SerialException(str(error)) from error
     with contextlib.suppress(AttributeError, NotImplementedError, ValueError, *PORT_LOST):
