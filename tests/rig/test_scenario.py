@@ -1,5 +1,8 @@
 """Scenarios: every fault is one sentence, and what can happen does happen."""
 
+import tomllib
+from importlib.resources import files
+
 import numpy as np
 import pytest
 
@@ -9,8 +12,10 @@ from idlerwatch.rig.build import build_plant
 from idlerwatch.rig.plant import no_faults, no_orders
 from idlerwatch.rig.scenario import ACTIONS, Course, Event, play, read_scenario
 
-PLANT = build_plant(load_settings(config_directory() / "example.toml"))
+SHED = load_settings(config_directory() / "example.toml")
+PLANT = build_plant(SHED)
 METERS = ("supply", "leg1")
+SHIPPED = sorted(p for p in (files("idlerwatch.rig") / "scenarios").iterdir() if p.name.endswith(".toml"))
 
 
 def scenario(**event):
@@ -61,3 +66,11 @@ def test_a_lost_capacitor_is_none_and_an_aged_one_is_less():
     assert lost.faults.capacitor_ratio.tolist() == [[1.0, 0.0]]
     aged = play(course, Event(at_s=0.0, do="age capacitor", what="C1", to=0.9), PLANT)
     assert np.allclose(aged.faults.capacitor_ratio, [[0.9, 1.0]])
+
+
+@pytest.mark.parametrize("path", SHIPPED, ids=lambda path: path.name)
+def test_every_shipped_scenario_can_be_played_in_the_shed_and_has_one_sentence_for_a_title(path):
+    document = tomllib.loads(path.read_text(encoding="utf-8"))
+    scenario = read_scenario(path.name, document, PLANT, [meter.name for meter in SHED.meter])
+    assert scenario.title.endswith(".")
+    assert max(event.at_s for event in scenario.event) < scenario.lasts_s
