@@ -118,7 +118,8 @@ make_passwords() {
     )
     chmod 0600 "$etc/phone-password"
     mosquitto_passwd -U "$mosquitto/idlerwatch.passwd"
-    say "passwords made: user $converter (in $etc/mqtt-password), user phone (in $etc/phone-password)"
+    say "passwords made: user $converter (in $etc/mqtt-password), user phone (in $etc/phone-password)
+the settings need: [mqtt] username = \"$converter\", password_file = \"/etc/idlerwatch/mqtt-password\""
 }
 
 random_word() { od -An -N12 -tx1 /dev/urandom | tr -d ' \n'; }

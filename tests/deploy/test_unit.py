@@ -7,7 +7,7 @@ from pathlib import Path
 
 import pytest
 
-from fakes.programs import need
+from servers import binary
 
 DEPLOY = Path(__file__).parents[2] / "deploy"
 UNIT = DEPLOY / "idlerwatch.service"
@@ -24,7 +24,7 @@ def checkable(tmp_path):
 
 def analyze(*words: str | Path) -> subprocess.CompletedProcess[str]:
     return subprocess.run(
-        [need("systemd-analyze"), *map(str, words)], capture_output=True, text=True, timeout=60, check=False
+        [binary("systemd-analyze"), *map(str, words)], capture_output=True, text=True, timeout=60, check=False
     )
 
 
