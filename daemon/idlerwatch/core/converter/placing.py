@@ -40,7 +40,9 @@ class Order:
     """In which order the conductors are placed, and which distances lie among them.
 
     `free` are the coordinates that may move: the first conductor is pinned, the second slides along the first axis.
-    `real`, `imaginary` (m, p) say with which sign a distance follows each of them.
+    `signs` (m, p) say how a distance's unit vector follows each of them: +-1 for a first coordinate, +-j for a second.
+    In the end the figure is turned so that `reference`, the fed pair where it is placed, has its nominal `direction`,
+    and moved so that the middle of the conductors `origin` is nought: N on an L1-N feed, else the legs.
     """
 
     start: tuple[int, int, int]
@@ -48,10 +50,13 @@ class Order:
     placed: tuple[int, ...]
     used: tuple[int, ...]
     ends: NDArray[np.int64]
-    free: tuple[int, ...]
-    real: Floats
-    imaginary: Floats
+    rows: NDArray[np.int64]
+    free: list[int]
+    signs: Complexes
     spare: int
+    reference: tuple[int, int]
+    direction: complex
+    origin: list[int]
 
 
 @functools.lru_cache(maxsize=256)
@@ -60,8 +65,7 @@ def find_order(feed: Feed, pairs: tuple[Pair, ...], present: tuple[bool, ...]) -
     edges = [(index, NUMBER[pair.first], NUMBER[pair.second]) for index, pair in enumerate(pairs) if present[index]]
     fed = {NUMBER[feed.pair.first], NUMBER[feed.pair.second]}
     edges.sort(key=lambda edge: {edge[1], edge[2]} != fed)
-    nominal = nominal_points(feed)
-    orders = [_order_from(edge, edges, nominal) for edge in edges]
+    orders = [_order_from(feed, edge, edges) for edge in edges]
     return max(orders, key=lambda order: len(order.steps), default=None)
 
 
@@ -71,7 +75,8 @@ def nominal_points(feed: Feed) -> Complexes:
     return np.array([points.get(conductor, 0j) for conductor in CONDUCTORS])
 
 
-def _order_from(start: tuple[int, int, int], edges: Sequence[tuple[int, int, int]], nominal: Complexes) -> Order:
+def _order_from(feed: Feed, start: tuple[int, int, int], edges: Sequence[tuple[int, int, int]]) -> Order:
+    nominal = nominal_points(feed)
     placed = [start[1], start[2]]
     steps: list[Step] = []
     while (step := _next_step(placed, edges, nominal)) is not None:
@@ -80,21 +85,32 @@ def _order_from(start: tuple[int, int, int], edges: Sequence[tuple[int, int, int
     used = [edge for edge in edges if edge[1] in placed and edge[2] in placed]
     ends = np.array([[edge[1], edge[2]] for edge in used], dtype=np.int64)
     free = (2 * placed[1], *(2 * new + part for new in placed[2:] for part in (0, 1)))
+    fed = (NUMBER[feed.pair.first], NUMBER[feed.pair.second])
+    reference = fed if set(fed) <= set(placed) else (placed[0], placed[1])
+    wanted = complex(nominal[reference[0]] - nominal[reference[1]])
     signs = np.zeros((len(used), len(CONDUCTORS)))
     signs[np.arange(len(used)), ends[:, 0]] = 1.0
     signs[np.arange(len(used)), ends[:, 1]] = -1.0
-    nothing = np.zeros_like(signs)
     return Order(
         start=(start[1], start[2], start[0]),
         steps=tuple(steps),
         placed=tuple(placed),
         used=tuple(edge[0] for edge in used),
         ends=ends,
-        free=free,
-        real=np.stack([signs, nothing], axis=-1).reshape(len(used), -1)[:, free],
-        imaginary=np.stack([nothing, signs], axis=-1).reshape(len(used), -1)[:, free],
+        rows=np.array([edge[0] for edge in used])[:, None],
+        free=list(free),
+        signs=np.stack([signs, 1j * signs], axis=-1).reshape(len(used), -1)[:, list(free)],
         spare=len(used) - len(free),
+        reference=reference,
+        direction=wanted / abs(wanted) if wanted else 1.0 + 0j,
+        origin=_origin(feed, placed),
     )
+
+
+def _origin(feed: Feed, placed: Sequence[int]) -> list[int]:
+    if not feed.is_line_feed and NUMBER["N"] in placed:
+        return [NUMBER["N"]]
+    return [0, 1, 2] if {0, 1, 2} <= set(placed) else [placed[0]]
 
 
 def _next_step(placed: Sequence[int], edges: Sequence[tuple[int, int, int]], nominal: Complexes) -> Step | None:
