@@ -19,7 +19,7 @@ from idlerwatch.rig.circuit import BUS, NEUTRAL, TERMINAL
 from idlerwatch.rig.machine import Induction, stack, typical_machine
 from idlerwatch.rig.values import PHASE_NAMES, Banks, Capacitors, Loads, Motors, Plant, Source, Starting
 
-SUPPLY_RATIO: Final = 1.04
+SUPPLY_RATIO: Final = 1.05
 LOOP_IMPEDANCE: Final = 0.18 + 0.07j
 NEUTRAL_OHMS: Final = 0.12
 LEAKAGE_OHMS: Final = 20_000.0

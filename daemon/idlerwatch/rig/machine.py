@@ -75,7 +75,7 @@ def typical_machine(
         "saturation": 11.8,
         "deep_bar": 0.9,
         "kinetic_energy": inertia * kilowatts * 1e3,
-        "friction": 0.02 * kilowatts * 1e3,
+        "friction": 0.045 * kilowatts * 1e3,
         "rated_power": kilowatts * 1e3,
     }
     return Induction(**{k: np.asarray(v, dtype=float) for k, v in values.items()}, asymmetry=np.ones(3))
