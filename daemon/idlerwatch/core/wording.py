@@ -68,14 +68,16 @@ def told(figure: Figure, formatter: Formatter) -> str:
 
 
 def told_with_uncertainty(figure: Figure, formatter: Formatter) -> str:
-    """Return a figure with its expanded uncertainty where one is stated.
+    """Return a figure with its expanded uncertainty where one is stated, and large enough to be written.
 
     Examples
     --------
     >>> told_with_uncertainty(Figure(0.0234, 0.004, "measured"), percent)
     '2.3 % ± 0.4 %'
+    >>> told_with_uncertainty(Figure(2.0, 0.01, "measured"), volts)
+    '2.0 V'
     """
-    if not figure.is_known or math.isnan(figure.uncertainty):
+    if not figure.is_known or math.isnan(figure.uncertainty) or formatter(figure.uncertainty) == formatter(0.0):
         return told(figure, formatter)
     return f"{formatter(figure.value)} ± {formatter(figure.uncertainty)}"
 
