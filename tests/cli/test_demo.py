@@ -9,8 +9,12 @@ import pytest
 from fakes.daemon import phone
 from idlerwatch.cli.broker import Broker as DemoBroker
 from idlerwatch.cli.demo import SCENARIOS, play, shortened
+from idlerwatch.core.payloads import event_body
 from idlerwatch.core.settings.model import Influx, Journal, Mqtt
+from idlerwatch.core.values import AlarmEvent
+from idlerwatch.core.watch.watch import Watch
 from idlerwatch.edges.files import config_directory, load_settings, read_toml
+from idlerwatch.edges.journal import JournalReader
 from idlerwatch.rig.build import build_plant
 from idlerwatch.rig.scenario import read_scenario
 from idlerwatch.schemas import schema
@@ -63,12 +67,33 @@ def test_a_bad_day_is_told_and_ends_well(installation, tmp_path, broker, influxd
     assert "supply-very-low" in raised & over
     assert {tag for tag in raised & over if tag.startswith("neutral-earth")}
     assert all(message["cause"] and message["advice"] for _, message in listening.messages)
+    assert replayed(settings, tmp_path / "journal") == journaled(tmp_path / "journal")
     told = capsys.readouterr().out
     assert "messages reached the phone" in told
     assert not (tmp_path / "journal" / "refused").exists()
     assert list((tmp_path / "journal").glob("refused*")) == []
     counted = json.loads(influxd.query("SELECT COUNT(voltage) FROM leg"))
     assert counted["results"][0]["series"][0]["values"][0][1] > 0
+
+
+def journaled(folder):
+    """Each transition as the journal has it, bit for bit."""
+    reader = JournalReader(folder)
+    bodies = [event.body for event in reader.events("alarm")]
+    reader.close()
+    assert len(bodies) > 10
+    return bodies
+
+
+def replayed(settings, folder):
+    """The same, from the recorded cycles fed to the core again."""
+    reader = JournalReader(folder)
+    watch, bodies = Watch.begin(settings), []
+    for item in reader.inputs():
+        watch, outputs = watch.take(item)
+        bodies += [json.loads(json.dumps(event_body(event))) for event in outputs if isinstance(event, AlarmEvent)]
+    reader.close()
+    return bodies
 
 
 class Checked:
