@@ -197,6 +197,13 @@ def test_a_machine_left_on_two_legs_draws_no_current_in_the_third(running):
     assert currents[0] > 3.0
 
 
+def test_a_converter_without_banks_or_machines_runs_too():
+    bare = SHED.model_copy(update={"bank": (), "capacitor": (), "machine": (), "meter": SHED.meter[:1]})
+    run = Run(bare).start()
+    run.until(Phase.RUNNING)
+    assert all(190.0 < volts < 253.0 for volts in run.go(1.0).legs())
+
+
 def test_many_converters_at_once_equal_each_alone_and_a_seed_repeats_itself():
     many = Run(count=3).start().go(4.0)
     again = Run(count=3).start().go(4.0)

@@ -132,8 +132,6 @@ def _next_phase(plant: Plant, state: State, held: Booleans, since: Floats) -> In
 
 
 def _banks_moved(plant: Plant, state: State, faults: Faults, called: Booleans, seconds: float) -> State:
-    if not plant.banks.names:
-        return state
     wanted = called & ~faults.coil_open
     moving = np.where(wanted == state.bank_closed, 0.0, state.bank_moving_for + seconds)
     arrived = moving >= plant.banks.operating_time
@@ -147,9 +145,9 @@ def _banks_moved(plant: Plant, state: State, faults: Faults, called: Booleans, s
 def _called(plant: Plant, state: State, orders: Orders) -> Booleans:
     """Return which banks the control calls for: (n, b). A coil on the legs themselves holds on into the run-down."""
     by_phase = plant.banks.wanted[:, state.phase].T & (state.phase_since[:, None] >= plant.banks.closes_after)
-    hangs_on_legs = np.array([coil is not None for coil in plant.banks.coil])
+    hangs_on_legs = np.array([coil is not None for coil in plant.banks.coil], dtype=bool)
     holds_on = hangs_on_legs & state.bank_closed & (state.phase == Phase.RUN_DOWN)[:, None]
-    return np.where(np.array(plant.banks.free), orders.bank_by_hand, by_phase | holds_on)
+    return np.where(np.array(plant.banks.free, dtype=bool), orders.bank_by_hand, by_phase | holds_on)
 
 
 def _has_voltage(plant: Plant, state: State, solution: Solution) -> Booleans:
