@@ -14,6 +14,8 @@ from idlerwatch.rig.line import FAULT_KINDS, Faults, Line
 FAULTS_EACH = 20
 
 
+STOOD_STILL_S = 1.5
+"""No cycle of one meter takes this long, unless nothing on the machine was running."""
 LINES = 5
 """Lines spoiled side by side: most of the time is waiting."""
 
@@ -47,8 +49,10 @@ def test_a_late_answer_to_the_same_block_is_never_the_next_cycles(marked, latest
     deadline = time.monotonic() + latest_s + 0.5
     readings = 0
     while time.monotonic() < deadline:  # cycles as fast as they go, until the late answer has surely come
-        before = device.answers
+        before, began = device.answers, time.monotonic()
         (given,) = deliveries.cycle()
+        if time.monotonic() - began > STOOD_STILL_S:
+            pytest.skip("the machine stood still for so long that the late answer came later than is promised")
         if isinstance(given, Reading):
             readings += 1
             assert wrong_values(given, 1, range(before + 1, device.answers + 1)) == 0
