@@ -9,10 +9,11 @@ import pytest
 from pydantic import BaseModel
 
 from idlerwatch.cli.program import COMMANDS, program
+from idlerwatch.core.registers import read_register_map
 from idlerwatch.core.settings import model
 from idlerwatch.core.values import Assessment, CycleEnd
 from idlerwatch.core.watch.watch import Watch
-from idlerwatch.edges.files import config_directory, load_settings
+from idlerwatch.edges.files import config_directory, load_settings, read_toml
 
 ROOT = Path(__file__).resolve().parents[1]
 DOCUMENTS = [ROOT / name for name in ("README.md", "DEVELOPERS.md", "deploy/README.md")]
@@ -38,7 +39,8 @@ def test_options_that_documents_name_exist(document):
     words = set()
     for name in COMMANDS:
         words |= {option for parameter in program.get_command(None, name).params for option in parameter.opts}
-    scripts = "".join(path.read_text() for path in (ROOT / "deploy").glob("*.sh"))
+    places = [*(ROOT / "deploy").glob("*.sh"), *(ROOT / "tests" / "bench").glob("*.py")]
+    scripts = "".join(path.read_text() for path in places)
     for option in re.findall(r"(?<![\w-])--[a-z][a-z-]+", document.read_text()):
         assert option in words | {"--help"} or option in scripts, option
 
@@ -58,21 +60,63 @@ def test_every_key_of_the_settings_is_explained_in_the_example(table, kind):
         assert re.search(rf"^(# )?{key} = ", EXAMPLE, re.MULTILINE), f"{table}.{key}"
 
 
+def whole_example() -> str:
+    """Return the example with its commented parts in force."""
+    return re.sub(r"^# (\[[a-z0-9.\[\]-]+$|[a-z_]+ = )", r"\1", EXAMPLE, flags=re.MULTILINE)
+
+
 def test_the_example_with_its_commented_parts_is_in_order_too(tmp_path):
-    whole = re.sub(r"^# (\[[a-z0-9.\[\]-]+$|[a-z_]+ = )", r"\1", EXAMPLE, flags=re.MULTILINE)
-    document: dict[str, Any] = tomllib.loads(whole)
+    document: dict[str, Any] = tomllib.loads(whole_example())
     assert any(meter["name"] == "io" for meter in document["meter"])
     path = tmp_path / "whole.toml"
-    path.write_text(whole)
+    path.write_text(whole_example())
     assert load_settings(path).contact
 
 
-def test_every_quantity_an_assessment_can_hold_is_in_the_nomenclature():
-    _, outputs = Watch.begin(load_settings(config_directory() / "example.toml")).take(CycleEnd(1.0))
+@pytest.mark.parametrize("path", sorted((ROOT / "config" / "meters").glob("*.toml")), ids=lambda path: path.stem)
+def test_every_shipped_map_is_in_order(path):
+    assert read_register_map(path.stem, read_toml(path)).points
+
+
+def test_every_alarm_of_the_shipped_list_is_in_force_with_the_example():
+    listed = read_toml(ROOT / "config" / "alarms.toml")
+    tags = {alarm.tag for alarm in load_settings(config_directory() / "example.toml").alarms.values()}
+    assert set(listed) <= tags
+
+
+EVERYTHING_ELSE = """
+[[meter]]
+name = "at-planer"
+bus = "panel"
+address = 40
+map = "din-float32"
+at = "machine:planer"
+powered_by = "own"
+channels = [{ across = "L1-N", through = "L1" }]
+"""
+CONTACTS = ("coil run energised", "sequence right", "breaker tripped")
+
+
+def test_the_nomenclature_holds_every_figure_of_an_assessment_and_no_other(tmp_path):
+    contacts = (f'[[contact]]\nmeter = "io"\ninput = {k}\nmeans = "{means}"\n' for k, means in enumerate(CONTACTS, 2))
+    path = tmp_path / "everything.toml"
+    path.write_text(whole_example() + EVERYTHING_ELSE + "\n".join(contacts))
+    _, outputs = Watch.begin(load_settings(path)).take(CycleEnd(1.0))
     assessment = next(output for output in outputs if isinstance(output, Assessment))
-    told = DOCUMENTS[1].read_text()
-    for _, _, quantity in assessment.figures:
-        assert f"`{quantity}`" in told, quantity
+
+    assert nomenclature() == {(measurement, quantity) for measurement, _, quantity in assessment.figures}
+
+
+def nomenclature() -> set[tuple[str, str]]:
+    """Return the measurements and quantities of the table of figures in DEVELOPERS.md."""
+    table = DOCUMENTS[1].read_text().partition("| quantity | stands in | meaning | unit | sign |")[2]
+    rows = re.findall(r"^\| (`[^|]+) \| ([a-z, ]+) \|", table.partition("\n\n")[0], re.MULTILINE)
+    return {
+        (measurement, quantity)
+        for quantities, places in rows
+        for quantity in re.findall(r"`(\w+)`", quantities)
+        for measurement in places.split(", ")
+    }
 
 
 def test_documents_speak_of_no_place_on_a_developers_machine():
