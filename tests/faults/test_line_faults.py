@@ -56,7 +56,7 @@ def test_a_late_answer_to_the_same_block_is_never_the_next_cycles(marked, latest
         if isinstance(given, Reading):
             readings += 1
             assert wrong_values(given, 1, range(before + 1, device.answers + 1)) == 0
-    assert readings > 3
+    assert readings >= 2, "there was nothing to be wrong"
 
 
 @pytest.mark.parametrize("kind", ["corrupted", "foreign", "truncated", "lost"])

@@ -208,14 +208,19 @@ def _clashes(way: Sequence[Block], owed: set[Shape], slave: int) -> bool:
 
 
 def _longer(block: Block, plan: MeterPlan) -> Iterable[tuple[Block, ...]]:
-    """Longer blocks within the addresses the map knows, where gaps may be read."""
+    """Longer blocks within the addresses the map knows, where gaps may be read; none takes half of anything along.
+
+    Half a float fetched again would be put together with the other half of an earlier answer.
+    """
     spans = dict(plan.spans)[block.table]
     least, most = spans[0][0], spans[-1][1]
     if not plan.limits.gaps:
         return
     for count in range(block.count + 1, min(plan.limits.largest_block, most - least) + 1):
-        address = min(block.address, most - count)
-        yield (replace(block, address=address, count=count),)
+        for address in range(min(block.address, most - count), max(least, block.end - count) - 1, -1):
+            if not any(first < edge < end for edge in (address, address + count) for first, end in spans):
+                yield (replace(block, address=address, count=count),)
+                break
 
 
 def _parts(block: Block, plan: MeterPlan) -> Iterable[tuple[Block, ...]]:
