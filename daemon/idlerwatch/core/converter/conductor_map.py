@@ -10,16 +10,21 @@ How it is found, for all samples with the same distances at once:
    With five conductors every rigid figure can be built so. What cannot be placed is undetermined, NaN.
 2. *Closed form.* Two circles meet in two points; a third distance, else the nominal geometry, says which.
 3. *Least squares.* Where more is measured than needed, Gauss-Newton on all distances, each weighted by its uncertainty.
+   Two conductors that nearly coincide (N and PE) are a short distance with a tight weight, a narrow curved valley: what
+   has not settled after the usual steps is damped (Marquardt) until it has.
 
 The weighted sum of squares that is left is chi-square with as many degrees of freedom as distances were to spare. Two
 circles that do not meet leave something too although nothing is to spare: distances that break the triangle inequality.
-Beyond the 0.999 quantile the distance with the largest normalised residual is the `misfit`; a figure that could not
-close is then not told at all (NaN), never bent into shape.
+Beyond the 0.999 quantile the distances contradict each other, and the one with the largest normalised residual is the
+`misfit`, where the residuals can tell it from the others. With a single distance to spare they never can: all
+normalised residuals are then equal, whichever is wrong. A figure that could not close is not told at all (NaN), never
+bent.
 
 References
 ----------
 F. C. Schweppe and J. Wildes, Power system static-state estimation, IEEE Trans. PAS-89 (1970), part I; A. Abur and
-A. Gomez Exposito, Power System State Estimation (2004), chapter 5 (largest normalised residual).
+A. Gomez Exposito, Power System State Estimation (2004), chapter 5 (largest normalised residual). D. W. Marquardt, An
+algorithm for least-squares estimation of nonlinear parameters, J. SIAM 11 (1963).
 """
 
 from collections.abc import Iterator, Sequence
@@ -36,13 +41,23 @@ from idlerwatch.core.electrical.uncertainty import CHI_SQUARE_999
 Floats = NDArray[np.float64]
 Integers = NDArray[np.int64]
 Complexes = NDArray[np.complex128]
+Booleans = NDArray[np.bool_]
 
-ITERATIONS: Final = 3
-"""Steps of Gauss-Newton from the closed form, for every sample alike, so that many at once equal each alone. They
-shrink a hundredfold each while the distances nearly agree; where they do not, the figure is named as bad anyway."""
+ITERATIONS: Final = 2
+"""Plain steps of Gauss-Newton from the closed form; each shrinks what is left a hundredfold while distances agree."""
+SETTLED: Final = 0.01
+"""A sample has settled when one step more would move no distance by this share of its standard uncertainty."""
+LONGEST_SEARCH: Final = 100
+"""Damped steps for a sample that has not settled; what has not settled by then contradicts itself grossly."""
+SOFTENED: Final = 0.03
+"""The search begins with no distance known better than to this share of itself."""
+ALIKE: Final = 0.99
+"""Two distances whose residuals correlate more than this cannot be told from each other."""
 _DAMPING: Final = 1e-9
 _TESTABLE: Final = 1e-6
 _NOTHING: Final = 1e-9
+_BOTH_SIDES: Final = np.array([[1j], [-1j]])
+_QUANTILES: Final = np.array(CHI_SQUARE_999)
 
 
 @dataclass(frozen=True, slots=True)
@@ -59,7 +74,8 @@ class ConductorMap:
     degrees_of_freedom : (...)
         Distances to spare.
     misfit : (...)
-        Index of the distance that fits worst where chi-square is beyond its 0.999 quantile, else -1.
+        Index of the distance that fits worst, where they contradict each other and the residuals can tell which; else
+        -1.
     moves : (..., m, 5)
         How far each point moves when a distance grows by its standard uncertainty, to first order: what follows from
         the points gets its uncertainty from these, with all correlations. Zero for a missing distance. [V]
@@ -70,6 +86,18 @@ class ConductorMap:
     chi_square: Floats
     degrees_of_freedom: Integers
     misfit: Integers
+
+    @property
+    def is_contradicted(self) -> Booleans:
+        """Whether chi-square is beyond its 0.999 quantile: not all distances can be right, (...)."""
+        contradicted: Booleans = self.chi_square > _limit(self.degrees_of_freedom)
+        return contradicted
+
+
+def _limit(spare: Integers | int) -> Floats:
+    """Return the 0.999 quantile of chi-square; with nothing to spare that of the triangle inequality."""
+    quantiles: Floats = _QUANTILES[np.minimum(spare, len(_QUANTILES) - 1)]
+    return quantiles
 
 
 def fit_conductors(feed: Feed, pairs: Sequence[Pair], voltages: Floats, standard_uncertainties: Floats) -> ConductorMap:
@@ -167,12 +195,13 @@ def _fit(order: Order, distances: Floats, standards: Floats) -> _Found:
     residuals = (lengths - values) * weights
     chi_square = (residuals**2).sum(axis=-1)
     misfit = np.full(len(values), -1, dtype=np.int64)
-    beyond = chi_square > CHI_SQUARE_999[min(order.spare, len(CHI_SQUARE_999) - 1)]
+    beyond = chi_square > _limit(order.spare)
     if beyond.any():
-        worst = _worst(residuals[beyond], jacobian[beyond], gains[beyond])
-        misfit[beyond] = np.array(used)[worst]
         if order.spare == 0:
             points[beyond] = np.nan
+        else:
+            worst = _worst(residuals[beyond], jacobian[beyond], gains[beyond])
+            misfit[beyond] = np.array([*used, -1])[worst]
     return _Found(points, _moves(order, gains, distances.shape), chi_square, misfit)
 
 
@@ -208,22 +237,21 @@ def _cross(step: Step, points: Complexes, distances: Floats) -> tuple[Complexes,
     """Return where two circles meet, on the right side, and whether all of them do."""
     base = points[:, step.near[0]]
     axis = points[:, step.near[1]] - base
-    length = np.maximum(np.abs(axis), 1e-12)
+    length = np.abs(axis) + _NOTHING
     first, second = distances[:, step.distances[0]], distances[:, step.distances[1]]
-    along = (first**2 - second**2 + length**2) / (2.0 * length)
-    square = first**2 - along**2
-    across = np.sqrt(np.maximum(square, 0.0))
-    # circles that do not meet: on the line between, as near to both as can be
-    along = np.where(square < 0.0, np.sign(along) * np.minimum(np.abs(along), first), along)
+    along = (first * first - second * second + length * length) / (2.0 * length)
+    square = first * first - along * along
+    apart = square < 0.0
+    met = not apart.any()
+    if not met:  # circles that do not meet: on the line between, as near to both as can be
+        along = np.where(apart, np.sign(along) * np.minimum(np.abs(along), first), along)
+        square = np.maximum(square, 0.0)
     unit = axis / length
-    found = [base + unit * (along + 1j * side * across) for side in (step.side, -step.side)]
+    spots = base + unit * (along + np.sqrt(square) * (_BOTH_SIDES * step.side))
     if not step.others:
-        return found[0], bool((square >= 0.0).all())
-    misses = [
-        sum(((np.abs(spot - points[:, near]) - distances[:, index]) ** 2 for near, index in step.others), np.zeros(1))
-        for spot in found
-    ]
-    return np.where(misses[0] <= misses[1], found[0], found[1]), bool((square >= 0.0).all())
+        return spots[0], met
+    misses = sum(((np.abs(spots - points[:, near]) - distances[:, at]) ** 2 for near, at in step.others), np.zeros(1))
+    return np.where(misses[0] <= misses[1], spots[0], spots[1]), met
 
 
 def _lengths(order: Order, points: Complexes) -> tuple[Floats, Complexes]:
@@ -240,24 +268,71 @@ def _jacobian(order: Order, units: Complexes, weights: Floats) -> Floats:
 
 def _refine(order: Order, points: Complexes, values: Floats, weights: Floats) -> tuple[Complexes, Floats, Floats]:
     """Move the points to the least sum of weighted squares; return them with the derivatives and gains there."""
-    coordinates = np.ascontiguousarray(points).view(np.float64)
+    start = np.ascontiguousarray(points).view(np.float64)
+    coordinates = start.copy()
+    lengths, units = _lengths(order, points)
     jacobian = gains = np.zeros(0)
     for _ in range(ITERATIONS):
-        lengths, units = _lengths(order, coordinates.view(np.complex128))
         jacobian = _jacobian(order, units, weights)
         gains = _gains(jacobian)
         coordinates[:, order.free] += (gains @ ((values - lengths) * weights)[..., None])[..., 0]
+        lengths, units = _lengths(order, coordinates.view(np.complex128))
+    step = gains @ ((values - lengths) * weights)[..., None]
+    restless = np.abs(jacobian @ step).max(axis=(-2, -1)) > SETTLED
+    if restless.any():
+        # first a wide valley along which long steps can be taken, then the narrow one within it
+        softened = np.minimum(weights[restless], 1.0 / (SOFTENED * values[restless] + _NOTHING))
+        coordinates[restless] = _search(order, start[restless], values[restless], softened)
+        coordinates[restless] = _search(order, coordinates[restless], values[restless], weights[restless])
+        _, units = _lengths(order, coordinates[restless].view(np.complex128))
+        jacobian[restless] = _jacobian(order, units, weights[restless])
+        gains[restless] = _gains(jacobian[restless])
     return coordinates.view(np.complex128), jacobian, gains
 
 
+def _search(order: Order, coordinates: Floats, values: Floats, weights: Floats) -> Floats:
+    """Return the coordinates (n, 10) of the least sum of squares, by steps damped until each of them is downhill."""
+    damping = 0.01 * weights.min(axis=-1) ** 2
+    for _ in range(LONGEST_SEARCH):
+        lengths, units = _lengths(order, coordinates.view(np.complex128))
+        residuals = (values - lengths) * weights
+        jacobian = _jacobian(order, units, weights)
+        step = _damped_step(jacobian, residuals, damping)
+        trial = coordinates.copy()
+        trial[:, order.free] += step
+        lengths, _ = _lengths(order, trial.view(np.complex128))
+        gain = (residuals**2).sum(axis=-1) - (((values - lengths) * weights) ** 2).sum(axis=-1)
+        is_downhill = gain >= 0.0
+        coordinates = np.where(is_downhill[:, None], trial, coordinates)
+        is_over = np.abs((jacobian @ step[..., None])[..., 0]).max(axis=-1) < 0.1 * SETTLED
+        if is_over.all():
+            break
+        damping = np.where(is_downhill, 0.2, 8.0) * damping
+    return coordinates
+
+
+def _damped_step(jacobian: Floats, residuals: Floats, damping: Floats) -> Floats:
+    """Return the step of each sample, (n, p): Gauss-Newton's, held back alike in every direction.
+
+    All coordinates are volts. Held back in proportion to each coordinate's weight instead, as usual, it would creep
+    along a valley that lies askew to the axes.
+    """
+    transposed = jacobian.swapaxes(-1, -2)
+    normal = transposed @ jacobian + damping[:, None, None] * np.eye(jacobian.shape[-1])
+    return np.asarray(np.linalg.solve(normal, transposed @ residuals[..., None])[..., 0])
+
+
 def _worst(residuals: Floats, jacobian: Floats, gains: Floats) -> Integers:
-    """Return which of the used distances has the largest normalised residual."""
-    hat = np.einsum("nmp,npm->nm", jacobian, gains)
-    spread = np.maximum(1.0 - hat, 0.0)
-    normalised: Floats = np.where(spread > _TESTABLE, np.abs(residuals) / np.sqrt(np.maximum(spread, _TESTABLE)), 0.0)
-    can_be_tested = (normalised > 0.0).any(axis=-1)
-    worst: Integers = np.where(can_be_tested, normalised.argmax(axis=-1), np.abs(residuals).argmax(axis=-1))
-    return worst
+    """Return which of the used distances has the largest normalised residual, -1 where another could as well be it."""
+    number = jacobian.shape[-2]
+    left = np.eye(number) - jacobian @ gains  # how residuals follow errors: their covariance too
+    spread = np.sqrt(np.maximum(np.einsum("nmm->nm", left), 0.0))
+    normalised: Floats = np.where(spread > _TESTABLE, np.abs(residuals) / np.maximum(spread, _TESTABLE), 0.0)
+    worst: Integers = normalised.argmax(axis=-1)
+    rows = np.arange(len(worst))
+    together = np.abs(left[rows, worst]) / np.maximum(spread[rows, worst, None] * spread, _TESTABLE**2)
+    together[rows, worst] = 0.0
+    return np.where(together.max(axis=-1) < ALIKE, worst, number)
 
 
 def _turned(order: Order, found: _Found) -> tuple[Complexes, Complexes]:
@@ -269,6 +344,7 @@ def _turned(order: Order, found: _Found) -> tuple[Complexes, Complexes]:
     span = found.points[:, first] - found.points[:, second]
     with np.errstate(invalid="ignore"):  # figures that could not close are NaN
         turn = order.direction * span.conj() / (np.abs(span) + _NOTHING)
-    origin = found.points[:, order.origin].mean(axis=-1, keepdims=True)
-    moved_origin = found.moves[..., order.origin].mean(axis=-1, keepdims=True)
+    share = 1.0 / len(order.origin)
+    origin = found.points[:, order.origin].sum(axis=-1, keepdims=True) * share
+    moved_origin = found.moves[..., order.origin].sum(axis=-1, keepdims=True) * share
     return (found.points - origin) * turn[:, None], (found.moves - moved_origin) * turn[:, None, None]

@@ -130,6 +130,5 @@ _ROUNDING = 1e-12
 def _largest_deviation(magnitudes: Floats) -> Floats:
     values = np.asarray(magnitudes, dtype=np.float64)
     mean = values.sum(axis=-1, keepdims=True) / values.shape[-1]
-    with np.errstate(invalid="ignore", divide="ignore"):
-        rate: Floats = np.abs(values - mean).max(axis=-1) / np.where(mean == 0.0, np.nan, mean)[..., 0]
+    rate: Floats = np.abs(values - mean).max(axis=-1) / np.where(mean == 0.0, np.nan, mean)[..., 0]
     return rate

@@ -3,6 +3,7 @@
 The vectorised functions of `electrical` do the computing, `propagate` the uncertainty.
 """
 
+import math
 from collections.abc import Callable, Mapping
 from typing import Final
 
@@ -57,7 +58,10 @@ def current_unbalance(currents: Triple) -> Measured:
 
 
 def _through(function: Callable[[Floats], Floats], measured: Measured) -> Measured:
-    return propagate(lambda inputs: function(inputs[..., 0]), (measured,))
+    if math.isnan(measured.value):
+        return MISSING
+    value, moved = (float(function(np.array(at))) for at in (measured.value, measured.value + measured.standard))
+    return MISSING if math.isnan(value) else Measured(value, abs(moved - value))
 
 
 def derating(line_rate: Measured) -> Measured:
