@@ -14,8 +14,8 @@ the smallest two successive samples agree on: half of it is flow.
 """
 
 import math
-from dataclasses import dataclass, replace
-from typing import Final
+from dataclasses import dataclass
+from typing import Final, NamedTuple
 
 from idlerwatch.core.values import ConverterState, Loading
 from idlerwatch.core.watch.derive import Derived
@@ -58,9 +58,11 @@ class Evidence:
     has_woken: bool = False
 
 
-@dataclass(frozen=True, slots=True)
-class LifeState:
-    """The state of the converter and what is remembered to judge the next sample."""
+class LifeState(NamedTuple):
+    """The state of the converter and what is remembered to judge the next sample.
+
+    A named tuple, since a sample changes it four times and a dataclass of as many fields takes five times as long.
+    """
 
     state: ConverterState = "blind"
     last_seen: ConverterState = "stopped"
@@ -191,8 +193,7 @@ def _note(state: LifeState, at: float, finding: Finding, evidence: Evidence, pla
     """Count how often in a row the finding came; a surge and a machine's start are remembered for patience."""
     weight = _witnesses(plan, state, finding, evidence)
     surges = finding == "surging" or state.loading == "machine starting"
-    return replace(
-        state,
+    return state._replace(
         finding=finding,
         finding_since=state.finding_since if finding == state.finding else at,
         finding_count=weight + (state.finding_count if finding == state.finding else 0),
@@ -208,11 +209,11 @@ def _note(state: LifeState, at: float, finding: Finding, evidence: Evidence, pla
 def _move(plan: Plan, state: LifeState, at: float, evidence: Evidence) -> LifeState:
     following = _following(state, at)
     if math.isnan(state.since):
-        state = replace(state, since=at)
+        state = state._replace(since=at)
     if following == state.state or not _is_confirmed(plan, state, at):
         return _learn_idle(plan, state, evidence)
     seen = state.last_seen if following == "blind" else following
-    return replace(state, state=following, last_seen=seen, since=_changed_at(state), last_current=NAN)
+    return state._replace(state=following, last_seen=seen, since=_changed_at(state), last_current=NAN)
 
 
 def _following(state: LifeState, at: float) -> ConverterState:
@@ -239,11 +240,11 @@ def _is_confirmed(plan: Plan, state: LifeState, at: float) -> bool:
 def _learn_idle(plan: Plan, state: LifeState, evidence: Evidence) -> LifeState:
     """Keep the smallest supply current of the running, unloaded converter that two successive samples agree on."""
     if state.state != "running" or state.finding != "turning" or evidence.leg_current >= plan.levels.machine:
-        return replace(state, last_current=NAN)
+        return state._replace(last_current=NAN)
     larger = max(evidence.current, state.last_current)
     if not math.isnan(state.last_current) and not larger >= state.idle_current:
-        return replace(state, last_current=evidence.current, idle_current=larger)
-    return replace(state, last_current=evidence.current)
+        return state._replace(last_current=evidence.current, idle_current=larger)
+    return state._replace(last_current=evidence.current)
 
 
 def _time_start(state: LifeState, before: LifeState, at: float) -> LifeState:
@@ -255,9 +256,9 @@ def _time_start(state: LifeState, before: LifeState, at: float) -> LifeState:
         # too quick to be seen starting: it began after the last sample that found it at rest
         began = before.last_at
     elif state.state not in ("starting", "change-over") and before.state not in ("starting", "change-over"):
-        return replace(state, last_at=at)
+        return state._replace(last_at=at)
     ended = state.since if state.state == "running" else at
-    return replace(state, last_at=at, start_began=began, start_time=ended - began)
+    return state._replace(last_at=at, start_began=began, start_time=ended - began)
 
 
 # --------------------------------------------------------------------------
@@ -268,12 +269,11 @@ def _time_start(state: LifeState, before: LifeState, at: float) -> LifeState:
 def _load(plan: Plan, state: LifeState, at: float, evidence: Evidence) -> LifeState:
     """Say what the running converter carries; a machine's start is a step of current, and lasts 30 s at most."""
     if state.state != "running":
-        return replace(state, loading="", machine_start_began=NAN, usual_leg_current=NAN, usual_supply_current=NAN)
+        return state._replace(loading="", machine_start_began=NAN, usual_leg_current=NAN, usual_supply_current=NAN)
     began = _or(state.machine_start_began, at)
     if _starts(plan, state, evidence) and at - began <= MACHINE_START_S:
-        return replace(state, loading="machine starting", machine_start_began=began)
-    return replace(
-        state,
+        return state._replace(loading="machine starting", machine_start_began=began)
+    return state._replace(
         loading=_steady_loading(plan, state, evidence),
         machine_start_began=NAN,
         usual_leg_current=_or(evidence.leg_current, state.usual_leg_current),
