@@ -186,8 +186,7 @@ def _fit(order: Order, distances: Floats, standards: Floats) -> _Found:
     used = list(order.used)
     values, weights = distances[:, used], 1.0 / standards[:, used]
     if order.spare > 0 or not is_closed:
-        points, jacobian, gains = _refine(order, points, values, weights)
-        lengths, _ = _lengths(order, points)
+        points, lengths, jacobian, gains = _refine(order, points, values, weights)
     else:
         lengths, units = _lengths(order, points)
         jacobian = _jacobian(order, units, weights)
@@ -266,8 +265,10 @@ def _jacobian(order: Order, units: Complexes, weights: Floats) -> Floats:
     return np.asarray(((units * weights).conj()[..., None] * order.signs).real)
 
 
-def _refine(order: Order, points: Complexes, values: Floats, weights: Floats) -> tuple[Complexes, Floats, Floats]:
-    """Move the points to the least sum of weighted squares; return them with the derivatives and gains there."""
+def _refine(
+    order: Order, points: Complexes, values: Floats, weights: Floats
+) -> tuple[Complexes, Floats, Floats, Floats]:
+    """Move the points to the least sum of weighted squares; return them with lengths, derivatives and gains there."""
     start = np.ascontiguousarray(points).view(np.float64)
     coordinates = start.copy()
     lengths, units = _lengths(order, points)
@@ -284,10 +285,10 @@ def _refine(order: Order, points: Complexes, values: Floats, weights: Floats) ->
         softened = np.minimum(weights[restless], 1.0 / (SOFTENED * values[restless] + _NOTHING))
         coordinates[restless] = _search(order, start[restless], values[restless], softened)
         coordinates[restless] = _search(order, coordinates[restless], values[restless], weights[restless])
-        _, units = _lengths(order, coordinates[restless].view(np.complex128))
+        lengths[restless], units = _lengths(order, coordinates[restless].view(np.complex128))
         jacobian[restless] = _jacobian(order, units, weights[restless])
         gains[restless] = _gains(jacobian[restless])
-    return coordinates.view(np.complex128), jacobian, gains
+    return coordinates.view(np.complex128), lengths, jacobian, gains
 
 
 def _search(order: Order, coordinates: Floats, values: Floats, weights: Floats) -> Floats:
@@ -342,8 +343,7 @@ def _turned(order: Order, found: _Found) -> tuple[Complexes, Complexes]:
     """
     first, second = order.reference
     span = found.points[:, first] - found.points[:, second]
-    with np.errstate(invalid="ignore"):  # figures that could not close are NaN
-        turn = order.direction * span.conj() / (np.abs(span) + _NOTHING)
+    turn = (order.direction * span.conj()) * (1.0 / (np.abs(span) + _NOTHING))
     share = 1.0 / len(order.origin)
     origin = found.points[:, order.origin].sum(axis=-1, keepdims=True) * share
     moved_origin = found.moves[..., order.origin].sum(axis=-1, keepdims=True) * share

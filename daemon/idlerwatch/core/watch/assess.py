@@ -70,8 +70,8 @@ def meter_states(plan: Plan, derived: Derived, life: LifeState) -> Mapping[str, 
 
 def told(measured: Measured, known: Known = "measured") -> Figure:
     """Return a measured value as a figure; unknown where it is missing."""
-    value = measured.value
-    return UNKNOWN if math.isnan(value) else Figure(value, K * measured.standard, known)
+    value, standard = measured
+    return UNKNOWN if math.isnan(value) else Figure(value, K * standard, known)
 
 
 def _figures(plan: Plan, derived: Derived, estimate: Estimate, life: LifeState) -> Iterator[Row]:
