@@ -56,3 +56,33 @@ def test_what_cannot_be_read_is_a_sentence_and_exit_2(words):
     result = CliRunner().invoke(program, ["assess", *words])
     assert result.exit_code == 2
     assert "Traceback" not in result.output
+
+
+def test_even_legs_over_uneven_lines_are_made_plain():
+    """231/227/229 V to neutral: 0.9 %; 404/381/399 V between lines: 3.5 % (arithmetic on the definitions)."""
+    result = run("L1-N=231", "L2-N=227", "L3-N=229", "L1-L2=404", "L2-L3=381", "L3-L1=399")
+    text = " ".join(result.output.split())
+    assert result.exit_code == 0
+    assert "The legs look more even than the lines are: 0.9 % to neutral, but machines on the lines see 3.5 %." in text
+
+
+@pytest.mark.parametrize(
+    "words",
+    [["L1-L2=100", "L2-L3=100", "L3-L1=230"],
+     ["L1-N=230", "L2-N=229", "L3-N=231", "L1-L2=399", "L2-L3=397", "L3-L1=470"]],
+)  # fmt: skip
+def test_voltages_that_cannot_all_be_right_are_told_by_their_own_words_and_exit_1(words):
+    result = run(*words)
+    text = " ".join(result.output.split())
+    assert result.exit_code == 1
+    assert "the voltages contradict each other: one of " in text
+    assert "'s L" not in text
+    assert "No unbalance is told from voltages that cannot all be right" in text
+    assert "Measure the three line voltages" not in text
+
+
+def test_a_centre_tapped_supply_is_judged_by_its_lines():
+    words = ["L1-N=120", "L2-N=120", "L3-N=208", "L1-L2=240", "L2-L3=240", "L3-L1=240"]
+    result = run("--feed", "L1-L2", "--voltage", "240", "--neutral", "centre-tap", *words, "--json")
+    assert figure(result, "voltage_unbalance_factor") == pytest.approx(0.0, abs=0.003)
+    assert figure(result, "phase_voltage_unbalance_rate") is None

@@ -5,10 +5,12 @@ import threading
 
 import jsonschema
 import pytest
+from click.testing import CliRunner
 
 from fakes.daemon import phone
 from idlerwatch.cli.broker import Broker as DemoBroker
 from idlerwatch.cli.demo import SCENARIOS, play, shortened
+from idlerwatch.cli.program import program
 from idlerwatch.core.payloads import event_body
 from idlerwatch.core.settings.model import Influx, Journal, Mqtt
 from idlerwatch.core.values import AlarmEvent
@@ -33,6 +35,16 @@ def test_every_shipped_scenario_can_be_played_on_the_example(installation):
     names = [meter.name for meter in installation.meter]
     for path in sorted(SCENARIOS.glob("*.toml")):
         assert read_scenario(path.stem, read_toml(path), plant, names).title
+
+
+def test_a_scenario_of_ones_own_is_a_file(tmp_path, installation):
+    own = tmp_path / "own.toml"
+    own.write_text('title = "Mine"\nlasts_s = 5.0\n[[event]]\nat_s = 1.0\ndo = "start machine"\nwhat = "lathe"\n')
+    shown = CliRunner().invoke(program, ["demo", "--scenario", str(own)])
+    assert shown.exit_code == 2
+    assert "event 1.what is 'lathe', must be a machine: resaw, planer, extractor, moulder" in shown.output
+    shown = CliRunner().invoke(program, ["demo", "--scenario", "none"])
+    assert "there is no scenario 'none'; there are" in shown.output
 
 
 def test_delays_are_shortened_but_not_below_a_second(installation):

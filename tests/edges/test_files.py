@@ -5,8 +5,7 @@ import shutil
 import pytest
 
 from idlerwatch.core.settings.faults import SettingsError
-from idlerwatch.edges import files
-from idlerwatch.edges.files import config_directory, load_settings, read_toml, write_atomically
+from idlerwatch.edges.files import config_directory, load_settings, read_toml
 
 EXAMPLE = config_directory() / "example.toml"
 
@@ -57,28 +56,6 @@ def test_map_of_ones_own_that_is_not_there_is_one_sentence(tmp_path):
     path = tmp_path / "shed.toml"
     path.write_text(EXAMPLE.read_text().replace('map = "din-float32"', 'map = "mine.toml"'))
     assert "'mine.toml', must be a file" in sentence(path)
-
-
-def test_file_is_replaced_whole_and_nothing_else_is_left(tmp_path):
-    path = tmp_path / "state.json"
-    write_atomically(path, "old")
-    write_atomically(path, "new µ")
-    assert path.read_text(encoding="utf-8") == "new µ"
-    assert list(tmp_path.iterdir()) == [path]
-
-
-def test_failed_replacement_leaves_the_old_file_and_no_rest(tmp_path, monkeypatch):
-    path = tmp_path / "state.json"
-    write_atomically(path, "old")
-
-    def full(descriptor):
-        raise OSError(28, "No space left on device")
-
-    monkeypatch.setattr(files.os, "fsync", full)
-    with pytest.raises(OSError, match="No space"):
-        write_atomically(path, "new")
-    assert path.read_text() == "old"
-    assert list(tmp_path.iterdir()) == [path]
 
 
 def test_toml_is_read_as_a_mapping():

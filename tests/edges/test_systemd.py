@@ -23,15 +23,6 @@ def test_without_a_manager_nothing_happens(monkeypatch, tmp_path):
     assert not systemd.notify("READY=1")
 
 
-@pytest.mark.parametrize(
-    ("usec", "pid", "seconds"), [("30000000", None, 30.0), ("30000000", "1", None), ("", None, None), ("x", None, None)]
-)
-def test_the_watchdogs_time_is_for_the_process_it_watches(monkeypatch, usec, pid, seconds):
-    monkeypatch.setenv("WATCHDOG_USEC", usec)
-    monkeypatch.setenv("WATCHDOG_PID", pid or str(os.getpid()))
-    assert systemd.watchdog_s() == seconds
-
-
 def test_a_credential_goes_before_a_file(monkeypatch, tmp_path):
     (tmp_path / "mqtt-password").write_text("from the manager\n")
     (tmp_path / "file").write_text("from the file\n")

@@ -66,7 +66,7 @@ some = st.lists(st.tuples(finite, finite), min_size=3, max_size=3).map(
 
 @given(some, some)
 def test_effective_is_not_less_than_arithmetic_nor_that_than_vector_nor_that_than_active(off, currents):
-    voltages = 230.0 * TURNS + off
+    voltages = 230.0 * TURNS + (off - off.mean())  # no zero sequence: else the first two need no order
     each, legs, lines, amperes = powers(voltages, currents)
     through = neutral_current(currents)
     ranked = [
@@ -75,8 +75,7 @@ def test_effective_is_not_less_than_arithmetic_nor_that_than_vector_nor_that_tha
         float(vector_apparent_power(each.real, each.imag)),
         abs(each.real.sum()),
     ]
-    if abs(voltages.sum()) < 1e-6:  # the order of the first two is shown for even voltages
-        assert ranked[0] >= ranked[1] - 1e-6
+    assert ranked[0] >= ranked[1] - 1e-6
     assert ranked[1] >= ranked[2] - 1e-6
     assert ranked[2] >= ranked[3] - 1e-6
 

@@ -3,6 +3,7 @@
 import csv
 import json
 import math
+import sys
 import textwrap
 from collections.abc import Iterator, Sequence
 from dataclasses import replace
@@ -19,6 +20,7 @@ from idlerwatch.core.byhand import Circumstances, Moment, assess_by_hand, read_w
 from idlerwatch.core.conductors import LEGS, LINE_PAIRS
 from idlerwatch.core.values import Assessment, Figure
 from idlerwatch.core.watch.assess import EARTH_NOT_MEASURED, NOT_SEEN
+from idlerwatch.core.watch.estimate import CONTRADICTION
 from idlerwatch.core.wording import amperes, factor, percent, power, told, told_with_uncertainty, volts
 
 WIDTH: Final = 88
@@ -41,7 +43,7 @@ def command(words: Sequence[str], feed: str, voltage: float, neutral: str, class
     """Assess readings given by hand, or the rows of a CSV file.
 
     A word says what was read: L1-N, L1-L2, N-PE a voltage, L1 a current, P_L1 and Q_L1 the power of a leg. A file has
-    these words as its header, and one moment a row.
+    these words as its header, and one moment a row. Exit 1 where voltages contradict each other.
     """
     if len(words) == 1 and "=" not in words[0]:
         moments = list(read_table(Path(words[0])))
@@ -55,6 +57,8 @@ def command(words: Sequence[str], feed: str, voltage: float, neutral: str, class
             click.echo(line)
     else:
         Console(width=None).print(_table(moments, found))
+    if any(map(contradicts, found)):
+        sys.exit(1)
 
 
 # --------------------------------------------------------------------------
@@ -176,6 +180,11 @@ def _unbalances(given: Assessment) -> Iterator[str]:
         yield textwrap.fill(f"not to be had from these: {'; '.join(missing)}", WIDTH, subsequent_indent="  ")
 
 
+def contradicts(given: Assessment) -> bool:
+    """Whether not all of the voltages that were read can be right."""
+    return any(remark.startswith(CONTRADICTION) for remark in given.remarks)
+
+
 def contrast(given: Assessment) -> str:
     """Return in one sentence what legs and lines say against each other.
 
@@ -183,6 +192,8 @@ def contrast(given: Assessment) -> str:
     """
     rate = given.figure("converter", "converter", "phase_voltage_unbalance_rate")
     true = given.figure("converter", "converter", "voltage_unbalance_factor")
+    if not true.is_known and contradicts(given):
+        return "No unbalance is told from voltages that cannot all be right: read them again, within ten seconds."
     if not true.is_known:
         return (
             "The unbalance is not known: leg-to-neutral voltages do not show the angles between the legs. Measure the "

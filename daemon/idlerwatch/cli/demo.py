@@ -31,7 +31,7 @@ SHORTEST_S: Final = 1.0
 
 @click.command()
 @click.option("--for", "seconds", type=click.FloatRange(min=1.0), help="End after so many seconds.")
-@click.option("--scenario", "name", default="slipway", show_default=True, help="What happens; see --list.")
+@click.option("--scenario", "name", default="slipway", show_default=True, help="A name (see --list), or a file.")
 @click.option("--list", "is_list", is_flag=True, help="List the scenarios, a sentence each.")
 @click.option(
     "--settings", "path", type=click.Path(path_type=Path), help="Your own settings, with virtual meters in their place."
@@ -53,10 +53,11 @@ def command(seconds: float | None, name: str, path: Path | None, *, is_list: boo
 
 
 def _scenario(name: str, settings: Settings) -> Scenario:
-    file = SCENARIOS / f"{name}.toml"
+    file = Path(name) if name.endswith(".toml") else SCENARIOS / f"{name}.toml"
     if not file.is_file():
         known = ", ".join(sorted(path.stem for path in SCENARIOS.glob("*.toml")))
-        raise click.BadParameter(f"there is no scenario {name!r}; there are {known}", param_hint="--scenario")
+        sentence = f"there is no scenario {name!r}; there are {known}, and files of yours"
+        raise click.BadParameter(sentence, param_hint="--scenario")
     plant = build_plant(settings)
     return read_scenario(f"scenario {name}", read_toml(file), plant, [meter.name for meter in settings.meter])
 

@@ -5,7 +5,7 @@ current, ``P_L1`` and ``Q_L1`` active and reactive power of a leg towards the ma
 """
 
 from collections.abc import Iterable, Mapping, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Any, Final
 
 from idlerwatch.core.conductors import LEGS, read_pair
@@ -92,8 +92,16 @@ def assess_by_hand(moments: Sequence[Moment], circumstances: Circumstances) -> l
     for number, moment in enumerate(moments):
         sample = _sample(settings, moment, float(number))
         derived = derive(plan, sample)
-        found.append(assess(plan, sample, derived, estimate(plan, derived), begin_life()))
+        found.append(_in_the_readers_words(assess(plan, sample, derived, estimate(plan, derived), begin_life()), words))
     return found
+
+
+def _in_the_readers_words(given: Assessment, words: Iterable[str]) -> Assessment:
+    """Return the assessment with readings named by their words alone: there are no meters to a clamp and a pencil."""
+    remarks = given.remarks
+    for word in words:
+        remarks = tuple(remark.replace(f"{_meter_name(word)}'s {word}", word) for remark in remarks)
+    return replace(given, remarks=remarks)
 
 
 def _settings(words: Iterable[str], circumstances: Circumstances) -> Settings:

@@ -4,8 +4,6 @@ The shipped ``config/`` lies in the package when it was installed from a wheel, 
 A register map is looked up by its name in ``config/meters``, or read from a path (relative to the settings file).
 """
 
-import os
-import tempfile
 import tomllib
 from collections.abc import Mapping
 from pathlib import Path
@@ -43,20 +41,6 @@ def read_toml(path: Path) -> Mapping[str, Any]:
         raise SettingsError([Fault(str(path), f"not UTF-8 at byte {error.start}", "must be UTF-8 text")]) from error
     except tomllib.TOMLDecodeError as error:
         raise SettingsError([Fault(str(path), f"not TOML ({error})", "must be written like example.toml")]) from error
-
-
-def write_atomically(path: Path, text: str) -> None:
-    """Replace a file whole, or not at all; it is on the disk when this returns. Raises OSError."""
-    descriptor, name = tempfile.mkstemp(dir=path.parent, prefix=f".{path.name}.")
-    try:
-        with os.fdopen(descriptor, "w", encoding="utf-8") as file:
-            file.write(text)
-            file.flush()
-            os.fsync(file.fileno())
-        Path(name).replace(path)
-    except OSError:
-        Path(name).unlink(missing_ok=True)
-        raise
 
 
 def _shipped_maps() -> dict[str, Mapping[str, Any]]:

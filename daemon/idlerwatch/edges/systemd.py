@@ -23,13 +23,6 @@ def notify(state: str) -> bool:
     return True
 
 
-def watchdog_s() -> float | None:
-    """Return within which time the manager wants ``WATCHDOG=1``, None where it does not watch this process. [s]"""
-    watched = os.environ.get("WATCHDOG_PID", str(os.getpid())) == str(os.getpid())
-    microseconds = os.environ.get("WATCHDOG_USEC", "")
-    return int(microseconds) / 1e6 if watched and microseconds.isdigit() else None
-
-
 def read_secret(credential: str, file: str | None) -> str | None:
     """Return a secret: the systemd credential of that name, else the file's content, else None.
 

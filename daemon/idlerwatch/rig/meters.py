@@ -18,7 +18,7 @@ import numpy as np
 from idlerwatch.core.conductors import LEGS, Pair
 from idlerwatch.core.registers import RegisterKey, RegisterMap, Table, image
 from idlerwatch.core.settings.model import Accuracy, Channel, Contact, Meter, Settings
-from idlerwatch.rig.line import Device, ModbusExceptionCode
+from idlerwatch.rig.line import ModbusExceptionCode
 from idlerwatch.rig.values import View
 
 ILLEGAL_ADDRESS: Final = ModbusExceptionCode(2)
@@ -222,11 +222,6 @@ def virtual_meters(settings: Settings, seed: int = 1) -> Mapping[str, Mapping[in
             answer_delay_s=register_map.answer_delay_s,
         )
     return buses
-
-
-def devices_of(meters: Mapping[int, VirtualMeter]) -> dict[int, Device]:
-    """Return the meters as what a line asks."""
-    return dict(meters)
 
 
 def _limits(accuracy: Accuracy) -> tuple[float, float, float]:

@@ -188,3 +188,8 @@ def test_nothing_but_a_terminal_is_no_way_out(document):
 def test_what_is_no_finite_number_is_refused(document, table, key, value):
     document[table][key] = value
     assert f"{table}.{key}" in [fault.split(" is ")[0] for fault in faults_of(document)]
+
+
+def test_what_a_word_must_look_like_is_said_in_words(document):
+    document["site"]["name"] = "My Shed"
+    assert only_fault(document) == "site.name is 'My Shed', must be lower-case letters, digits and hyphens"

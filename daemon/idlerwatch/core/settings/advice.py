@@ -9,7 +9,8 @@ import itertools
 from collections.abc import Callable, Iterable, Iterator, Sequence
 from typing import Final
 
-from idlerwatch.core.conductors import LINE_PAIRS, NEUTRAL_PAIRS, Pair
+from idlerwatch.core.conductors import LEGS, NEUTRAL_PAIRS, Pair
+from idlerwatch.core.converter.placing import NUMBER, find_order
 from idlerwatch.core.polling import LineTiming, MeterPlan, plan_meter, plan_time_s
 from idlerwatch.core.settings.model import Bus, Meter, Settings
 
@@ -27,11 +28,11 @@ def advise(settings: Settings) -> tuple[str, ...]:
 
 def wiring_level(settings: Settings) -> str:
     """Return the wiring level, ``1``, ``2``, ``2s`` or ``3``; ``0`` where no meter sees supply or legs."""
-    if _sees_banks(settings) or NEUTRAL_PAIR in _pairs(settings) or settings.contact:
-        return "3"
     legs = [meter for meter in settings.meter if meter.at == "leg"]
     if not legs:
         return "1" if _supply_meters(settings) else "0"
+    if _sees_banks(settings) or NEUTRAL_PAIR in _pairs(settings) or settings.contact:
+        return "3"
     return "2" if _sees_lines(settings) and all(meter.power_pair is None for meter in legs) else "2s"
 
 
@@ -42,7 +43,7 @@ def wiring_level(settings: Settings) -> str:
 
 def _unbalance(settings: Settings) -> Iterator[str]:
     if _sees_lines(settings):
-        yield "Unbalance is measured: all three line voltages are."
+        yield "Unbalance is measured: the voltages across the legs make a rigid figure."
     elif set(NEUTRAL_PAIRS) & set(_pairs(settings)):
         yield (
             "Angles between the legs are not seen: leg-to-neutral voltages can look even while the lines "
@@ -171,8 +172,10 @@ def _pairs(settings: Settings) -> tuple[Pair, ...]:
 
 
 def _sees_lines(settings: Settings) -> bool:
-    pairs = set(_pairs(settings))
-    return set(LINE_PAIRS) <= pairs
+    """Return whether the three legs are a rigid figure: three line voltages, or enough others."""
+    pairs = _pairs(settings)
+    order = find_order(settings.supply.as_feed, pairs, (True,) * len(pairs))
+    return order is not None and {NUMBER[leg] for leg in LEGS} <= set(order.placed)
 
 
 def _supply_meters(settings: Settings) -> Sequence[Meter]:

@@ -5,7 +5,7 @@ done better in `advice`. All are frozen, unknown keys are faults. Ratios are rat
 """
 
 from collections.abc import Mapping
-from typing import Annotated, Literal
+from typing import Annotated, Final, Literal
 
 from pydantic import BaseModel, BeforeValidator, ConfigDict, Field, PlainSerializer
 
@@ -13,13 +13,29 @@ from idlerwatch.core.conductors import Feed, Leg, Pair, read_pair
 from idlerwatch.core.registers import RegisterMap
 from idlerwatch.core.values import ConverterState, Priority
 
+NAME: Final = r"^[a-z0-9][a-z0-9-]*$|^[A-Z][A-Za-z0-9]*$"
+TOPIC_WORD: Final = r"^[a-z0-9-]+$"
+PLACE: Final = r"^(supply|leg|earth|contacts|(bank|machine):[A-Za-z0-9-]+)$"
+MEANING: Final = r"^(bank [A-Za-z0-9-]+ closed|coil [A-Za-z0-9-]+ energised|sequence right|breaker tripped)$"
+ADDRESS: Final = r"^https?://"
+HOURS: Final = r"^\d\d:\d\d-\d\d:\d\d$"
+PATTERNS: Final[Mapping[str, str]] = {
+    NAME: "must be lower-case letters, digits and hyphens, or begin with a capital, like C1",
+    TOPIC_WORD: "must be lower-case letters, digits and hyphens",
+    PLACE: 'must be "supply", "leg", "earth", "contacts", "bank:NAME" or "machine:NAME"',
+    MEANING: 'must be "bank NAME closed", "coil NAME energised", "sequence right" or "breaker tripped"',
+    ADDRESS: "must begin with http:// or https://",
+    HOURS: "must be two times of day, like 07:30-18:00",
+}
+"""Each pattern in words."""
+
 
 def _pair(value: object) -> object:
     return read_pair(value) if isinstance(value, str) else value
 
 
 PairField = Annotated[Pair, BeforeValidator(_pair), PlainSerializer(str)]
-Name = Annotated[str, Field(pattern=r"^[a-z0-9][a-z0-9-]*$|^[A-Z][A-Za-z0-9]*$", max_length=40)]
+Name = Annotated[str, Field(pattern=NAME, max_length=40)]
 Positive = Annotated[float, Field(gt=0)]
 NotNegative = Annotated[float, Field(ge=0)]
 PriorityWhen = Literal["S", "A", "C", "U", "M", "L", "D", "B", "W", "machines", "generator"]
@@ -34,8 +50,8 @@ class Table(BaseModel):
 class Site(Table):
     """The table ``[site]``."""
 
-    name: Annotated[str, Field(pattern=r"^[a-z0-9-]+$")]
-    converter: Annotated[str, Field(pattern=r"^[a-z0-9-]+$")]
+    name: Annotated[str, Field(pattern=TOPIC_WORD)]
+    converter: Annotated[str, Field(pattern=TOPIC_WORD)]
     cycle_s: NotNegative = 1.0
 
 
@@ -133,7 +149,7 @@ class Meter(Table):
     bus: Name
     address: Annotated[int, Field(ge=1, le=247)]
     map: str
-    at: Annotated[str, Field(pattern=r"^(supply|leg|earth|contacts|(bank|machine):[A-Za-z0-9-]+)$")]
+    at: Annotated[str, Field(pattern=PLACE)]
     powered_by: PairField | Literal["own"] | None = None
     usable_from_volts: NotNegative = 0.0
     boot_s: NotNegative = 0.0
@@ -159,7 +175,7 @@ class Contact(Table):
     input: Annotated[int, Field(ge=1)]
     means: Annotated[
         str,
-        Field(pattern=r"^(bank [A-Za-z0-9-]+ closed|coil [A-Za-z0-9-]+ energised|sequence right|breaker tripped)$"),
+        Field(pattern=MEANING),
     ]
 
 
@@ -189,7 +205,7 @@ class Mqtt(Table):
 class Influx(Table):
     """The table ``[influx]``."""
 
-    url: Annotated[str, Field(pattern=r"^https?://")]
+    url: Annotated[str, Field(pattern=ADDRESS)]
     org: str = ""
     bucket: str
     token_file: str | None = None
@@ -207,7 +223,7 @@ class Journal(Table):
 class People(Table):
     """The table ``[people]``."""
 
-    working_hours: Annotated[str, Field(pattern=r"^\d\d:\d\d-\d\d:\d\d$")] | None = None
+    working_hours: Annotated[str, Field(pattern=HOURS)] | None = None
 
 
 class Alarm(Table):

@@ -15,7 +15,7 @@ from pydantic_core import ErrorDetails
 
 from idlerwatch.core.registers import RegisterMap, read_register_map
 from idlerwatch.core.settings.faults import Fault, SettingsError
-from idlerwatch.core.settings.model import Alarm, Settings
+from idlerwatch.core.settings.model import PATTERNS, Alarm, Settings
 from idlerwatch.core.settings.refusals import find_refusals
 
 Document = Mapping[str, Any]
@@ -196,7 +196,7 @@ def _wanted(detail: ErrorDetails) -> str:
         case "value_error":
             return str(context["error"]).split(", ", 1)[-1]
         case "string_pattern_mismatch":
-            return f"must match {context['pattern']}"
+            return PATTERNS.get(context["pattern"], f"must match {context['pattern']}")
         case "too_short":
             return "must hold at least one"
         case "string_too_long":

@@ -202,10 +202,12 @@ def _suspects(plan: Plan, distances: _Distances) -> tuple[int, ...]:
 
 def _one_of(distances: _Distances, suspects: tuple[int, ...]) -> str:
     names = ", ".join(distances.named(index) for index in suspects)
-    return f"the voltages contradict each other: one of {names} is wrong"
+    return f"{CONTRADICTION}: one of {names} is wrong"
 
 
-NOTHING_FITS: Final = "the voltages contradict each other: no angles from these"
+CONTRADICTION: Final = "the voltages contradict each other"
+"""How a remark begins where not all voltages can be right."""
+NOTHING_FITS: Final = f"{CONTRADICTION}: no angles from these"
 
 
 def _with_points(plan: Plan, plain: Estimate, fit: _Fit) -> Estimate:
