@@ -8,6 +8,7 @@ a = exp(j 2 pi/3), for the sequence L1-L2-L3.
 """
 
 from collections.abc import Sequence
+from typing import Final
 
 import numpy as np
 from numpy.typing import NDArray
@@ -16,6 +17,9 @@ from idlerwatch.core.electrical.sequence import TO_COMPONENTS, TO_PHASORS
 
 Complexes = NDArray[np.complex128]
 Floats = NDArray[np.float64]
+
+_INSULATION: Final = 1e-12
+"""What an open node has to the reference, so that one that is joined to nothing stands there. [S]"""
 
 
 def winding_matrix(sequence_admittances: Complexes) -> Complexes:
@@ -125,3 +129,37 @@ def solve_nodes(matrix: Complexes, injections: Complexes) -> Complexes:
         Potentials to the reference. [V]
     """
     return np.asarray(np.linalg.solve(matrix, injections[..., None])[..., 0], dtype=np.complex128)
+
+
+def potentials_behind(matrix: Complexes, forces: Complexes, impedances: Complexes | Floats) -> Complexes:
+    """Return the potentials of nodes, each fed from a source behind an impedance or left open.
+
+    Parameters
+    ----------
+    matrix : (..., k, k)
+        Nodal admittances of what is fed, to the reference. [S]
+    forces : (..., k)
+        Electromotive force to the reference behind each node; of no effect at an open one. [V]
+    impedances : (..., k)
+        From source to node. Nought is a stiff source, infinite an open node. [ohm]
+
+    Returns
+    -------
+    (..., k)
+        Potentials to the reference; `matrix @ potentials` is the current each source gives. [V]
+
+    Examples
+    --------
+    >>> load = pair_matrix(2, [(0, 1), (1, -1)], np.array([0.1, 0.1]))
+    >>> potentials_behind(load, np.array([100.0, 0.0]), np.array([5.0, np.inf])).real.round(6).tolist()
+    [80.0, 40.0]
+
+    References
+    ----------
+    Kirchhoff's laws: Z (Y V) + V = E at a fed node, Y V = 0 at an open one.
+    """
+    is_open = np.isinf(impedances)
+    through = np.where(is_open, 1.0, impedances)
+    standing = np.where(is_open, _INSULATION, 1.0)
+    whole = through[..., :, None] * matrix + standing[..., :, None] * np.eye(matrix.shape[-1])
+    return solve_nodes(whole, np.where(is_open, 0.0, forces))
