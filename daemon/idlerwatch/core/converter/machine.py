@@ -15,7 +15,7 @@ the machine is that of the positive sequence less that of the negative one; zero
 Where the iron saturates the magnetising current has a second part, which grows with a high odd power of the flux (the
 two-term characteristic i = a f + b f^n usual for transformers: E. J. Dick and W. Watson, *Transformer models for
 transient studies based on field measurements*, IEEE Trans. PAS 1981; the exponent 9 is chosen here: no-load currents
-that climb by 20 to 50 % at +10 % of voltage, which is common practice, are then a `saturation` of 0.09 to 0.47).
+that climb by 20 to 50 % at +10 % of voltage, which is common practice, are then a `saturation` of 0.10 to 0.72).
 """
 
 import math
