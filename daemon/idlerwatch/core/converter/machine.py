@@ -65,6 +65,7 @@ class Iron:
     reference_voltage: Floats
 
 
+@np.errstate(invalid="ignore")
 def phase_admittance(circuit: EquivalentCircuit, slip: Floats) -> Complexes:
     """Return the admittance a phase at a slip, which may be zero: (...) and (...) -> (...). [S]
 
@@ -75,9 +76,7 @@ def phase_admittance(circuit: EquivalentCircuit, slip: Floats) -> Complexes:
     18.78
     """
     behind = _rotor_admittance(circuit, slip) + circuit.shunt_admittance
-    with np.errstate(invalid="ignore"):
-        seen = behind / (1.0 + circuit.stator_impedance * behind)
-    return np.asarray(seen, dtype=np.complex128)
+    return np.asarray(behind / (1.0 + circuit.stator_impedance * behind), dtype=np.complex128)
 
 
 def sequence_admittances(circuit: EquivalentCircuit, slip: Floats, zero_admittance: Complexes | float) -> Complexes:
@@ -87,12 +86,11 @@ def sequence_admittances(circuit: EquivalentCircuit, slip: Floats, zero_admittan
     return np.stack(np.broadcast_arrays(np.asarray(zero_admittance, dtype=np.complex128), positive, negative), axis=-1)
 
 
+@np.errstate(invalid="ignore")
 def airgap_voltage(circuit: EquivalentCircuit, slip: Floats, voltage: Complexes | Floats) -> Floats:
     """Return the voltage across the airgap of one sequence, whose voltage and slip are given: (...). [V]"""
     behind = _rotor_admittance(circuit, slip) + circuit.shunt_admittance
-    with np.errstate(invalid="ignore"):
-        across = np.abs(voltage / (1.0 + circuit.stator_impedance * behind))
-    return np.asarray(across, dtype=np.float64)
+    return np.asarray(np.abs(voltage / (1.0 + circuit.stator_impedance * behind)), dtype=np.float64)
 
 
 def airgap_power(circuit: EquivalentCircuit, slip: Floats, voltage: Complexes | Floats) -> Floats:
@@ -182,6 +180,7 @@ def corrected_slip(
     return np.asarray(circuit.rotor_resistance * slip_over_resistance(circuit, wanted, positive), dtype=np.float64)
 
 
+@np.errstate(invalid="ignore", divide="ignore")
 def slip_over_resistance(circuit: EquivalentCircuit, power: Floats, voltage: Complexes | Floats) -> Floats:
     """Return s / Rr at which one sequence sends a power over the airgap, whatever Rr is.
 
@@ -209,10 +208,8 @@ def slip_over_resistance(circuit: EquivalentCircuit, power: Floats, voltage: Com
     share = 1.0 / (1.0 + circuit.stator_impedance * circuit.shunt_admittance)
     source = circuit.stator_impedance * share + 1j * circuit.rotor_reactance
     spare = 3.0 * np.abs(voltage * share) ** 2 - 2.0 * source.real * power
-    with np.errstate(invalid="ignore", divide="ignore"):
-        root = np.sqrt(spare**2 - (2.0 * power * np.abs(source)) ** 2)
-        solution = 2.0 * power / (spare + root)
-    return np.where(spare > 0.0, solution, np.nan)
+    root = np.sqrt(spare**2 - (2.0 * power * np.abs(source)) ** 2)
+    return np.where(spare > 0.0, 2.0 * power / (spare + root), np.nan)
 
 
 def saturated(circuit: EquivalentCircuit, iron: Iron, across: Floats) -> EquivalentCircuit:
@@ -234,7 +231,6 @@ def saturated(circuit: EquivalentCircuit, iron: Iron, across: Floats) -> Equival
     )
 
 
+@np.errstate(invalid="ignore")
 def _rotor_admittance(circuit: EquivalentCircuit, slip: Floats) -> Complexes:
-    with np.errstate(invalid="ignore"):
-        branch = slip / (circuit.rotor_resistance + 1j * slip * circuit.rotor_reactance)
-    return np.asarray(branch, dtype=np.complex128)
+    return np.asarray(slip / (circuit.rotor_resistance + 1j * slip * circuit.rotor_reactance), dtype=np.complex128)

@@ -46,6 +46,18 @@ def winding_matrix(sequence_admittances: Complexes) -> Complexes:
     return matrix
 
 
+def star_matrix(sequence_admittances: Complexes) -> Complexes:
+    """Return the nodal admittances of three windings whose star point is the fourth node: (..., 3) -> (..., 4, 4). [S]
+
+    Equal potentials of the legs send Y0 a leg into the star point, so one that floats has exact noughts there.
+    """
+    legs = winding_matrix(sequence_admittances)
+    to_star = np.repeat(-sequence_admittances[..., None, :1], 3, axis=-1)
+    upper = np.concatenate([legs, np.swapaxes(to_star, -1, -2)], axis=-1)
+    lower = np.concatenate([to_star, 3.0 * sequence_admittances[..., None, :1]], axis=-1)
+    return np.concatenate([upper, lower], axis=-2)
+
+
 def with_terminal(matrix: Complexes) -> Complexes:
     """Return the matrix with one more node, through which all currents return: (..., k, k) -> (..., k+1, k+1)."""
     column = -matrix.sum(axis=-1, keepdims=True)

@@ -40,8 +40,7 @@ from idlerwatch.core.converter.network import (
     incidence,
     pair_matrix,
     potentials_behind,
-    winding_matrix,
-    with_terminal,
+    star_matrix,
 )
 from idlerwatch.core.electrical.sequence import phasors_from_sequence, sequence_components
 
@@ -97,7 +96,7 @@ class Machines:
 
 @dataclass(frozen=True, slots=True)
 class SteadyState:
-    """What a converter settles to; NaN in all of a case in which a machine stalls.
+    """What a converter settles to; NaN in all but Y0 of a case in which a machine stalls.
 
     `potentials` (..., 4) of L1 L2 L3 N to the bond [V]; `supply` (..., 4) what the utility gives into each [A];
     `slips`, `magnetising_reactances` (..., m) [1], [ohm]; `admittances` (..., m, 3) Y0 Y1 Y2 [S]; `currents`
@@ -161,6 +160,7 @@ def capacitors(pairs: tuple[Pair, ...], capacitances: Floats, frequency: Floats 
     return Branches(pairs, np.asarray(1j * angular * capacitances, dtype=np.complex128))
 
 
+@np.errstate(invalid="ignore")
 def linear_potentials(supply: Utility, branches: Branches, windings: Complexes) -> Complexes:
     """Return the potentials of L1 L2 L3 N to the bond, of a circuit whose admittances are known.
 
@@ -189,6 +189,7 @@ def linear_potentials(supply: Utility, branches: Branches, windings: Complexes) 
     return potentials_behind(matrix, supply.forces, supply.impedances)
 
 
+@np.errstate(invalid="ignore")
 def steady_state(supply: Utility, branches: Branches, machines: Machines) -> SteadyState:
     """Return the steady state in which every torque and every magnetisation is met.
 
@@ -200,7 +201,7 @@ def steady_state(supply: Utility, branches: Branches, machines: Machines) -> Ste
     Returns
     -------
     SteadyState
-        Of each case. Where a machine has not got the torque asked, or an input is missing, all of it is NaN.
+        Of each case. Where a machine has not got the torque asked, or an input is missing, all but Y0 is NaN.
     """
 
     def misfit(unknowns: Floats) -> Floats:
@@ -244,9 +245,8 @@ def _branch_matrix(branches: Branches) -> Complexes:
 
 def _machine_matrix(windings: Complexes, order: tuple[int, int, int]) -> Complexes:
     """Return the nodal admittances of all machines: (..., m, 3) -> (..., 4, 4). [S]"""
-    ordered = winding_matrix(windings.sum(axis=-2))
-    legs = list(order)
-    return with_terminal(ordered[..., legs, :][..., :, legs])
+    nodes = [*order, NODES.index("N")]
+    return star_matrix(windings.sum(axis=-2))[..., nodes, :][..., :, nodes]
 
 
 def _winding_components(potentials: Complexes, order: tuple[int, int, int]) -> Complexes:
