@@ -16,6 +16,7 @@ from idlerwatch.core.converter.machine import (
     airgap_voltage,
     phase_admittance,
     saturated,
+    sequence_admittances,
 )
 from idlerwatch.core.converter.nameplate import Nameplate, typical_machine, zero_admittance
 from idlerwatch.core.converter.steady import (
@@ -75,6 +76,10 @@ def shop(feed, star_point, pairs, count, seed=3):
             np.stack([np.zeros(count), rng.uniform(0.0, 1.0, count)], axis=-1),
         ),
     )
+
+
+def first_of(circuit):
+    return EquivalentCircuit(*(getattr(circuit, f.name)[0] for f in dataclasses.fields(circuit)))
 
 
 def to_neutral(state):
@@ -240,6 +245,31 @@ def test_a_stalled_machine_makes_its_own_case_missing_and_no_other():
     found = [getattr(state, name) for name in ("potentials", "slips", "magnetising_reactances", "currents", "through")]
     assert all(np.isnan(values[1]).all() for values in found)
     assert not any(np.isnan(values[[0, 2]]).any() for values in found)
+
+
+@pytest.mark.parametrize(("feed", "star_point", "pairs"), FEEDS)
+def test_slip_climbs_with_the_load_until_the_motor_stalls_and_stays_so_beyond(feed, star_point, pairs):
+    """The most torque there is, by trying the motor's slips one by one, beside an idler at synchronous speed."""
+    both = machines(plates(feed, 5.5, 3.0), (star_point, "floating"), np.zeros(2))
+    cans = capacitors(pairs, np.full(len(pairs), 30e-6), 50.0)
+    supply = utility(feed, 0.2 + 0.1j, 0.1)
+    rigid = dataclasses.replace(both, iron=Iron(np.zeros(2), np.ones(2)))
+
+    tried = np.stack([np.zeros(2000), np.linspace(1e-3, 0.6, 2000)], axis=-1)
+    nodes = linear_potentials(supply, cans, sequence_admittances(both.circuit, tried, both.zero_admittance))
+    volts = sequence_components(nodes[:, :3] - nodes[:, 3:])[..., None, :]
+    most = airgap_torque(both.circuit, tried, volts[..., 1], volts[..., 2])[:, 1].max()
+    torques = most * np.linspace(0.05, 1.2, 60)
+    idler = np.zeros(60)  # turns at synchronous speed: what the negative sequence brakes is given back
+    for _ in range(5):
+        asked = dataclasses.replace(rigid, torque=np.stack([idler, torques], axis=-1))
+        state = steady_state(supply, cans, asked)
+        volts = to_neutral(state)
+        idler = -np.nan_to_num(airgap_power(first_of(both.circuit), 2.0, volts[:, 2]))
+    slips = state.slips[:, 1]
+    stalled = np.isnan(slips)
+    assert np.all(np.diff(slips[~stalled]) > 0.0)
+    assert stalled.tolist() == (torques > most).tolist()
 
 
 def test_a_missing_figure_makes_its_own_case_missing_and_no_other():

@@ -138,9 +138,12 @@ def solve_nodes(matrix: Complexes, injections: Complexes) -> Complexes:
     Returns
     -------
     (..., k)
-        Potentials to the reference. [V]
+        Potentials to the reference; NaN where an admittance is. [V]
     """
-    return np.asarray(np.linalg.solve(matrix, injections[..., None])[..., 0], dtype=np.complex128)
+    missing = np.isnan(matrix).any(axis=(-2, -1), keepdims=True)
+    there = np.where(missing, np.eye(matrix.shape[-1]), matrix)  # a solver may take a NaN for a singular matrix
+    solved = np.linalg.solve(there, injections[..., None])
+    return np.asarray(np.where(missing, np.nan, solved)[..., 0], dtype=np.complex128)
 
 
 def potentials_behind(matrix: Complexes, forces: Complexes, impedances: Complexes | Floats) -> Complexes:

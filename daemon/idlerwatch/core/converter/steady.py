@@ -274,18 +274,27 @@ def _misfit(supply: Utility, branches: Branches, machines: Machines, unknowns: F
 
 
 def _settle(misfit: Callable[[Floats], Floats], start: Floats) -> Floats:
-    """Return where the misfit (..., n) is nought; NaN in a case that does not get there."""
+    """Return where the misfit (..., 2m) is nought; NaN in a case that does not get there.
+
+    A machine that has not got its torque on the way keeps its slip, until the voltages may have risen.
+    """
     at = start
     for _ in range(_SUBSTITUTIONS):
-        at = at + 0.5 * misfit(at)
+        at = at + 0.5 * _held(misfit(at))
     for _ in range(_STEPS):
         rest = misfit(at)
-        if not np.any(np.abs(rest) > _SETTLED):
+        if not np.any(np.abs(_held(rest)) > _SETTLED):
             break
         onward = at - _newton_step(misfit, at, rest)
         is_better = _size(misfit(onward)) < _size(rest)
-        at = np.where(is_better, onward, at + 0.5 * rest)
+        at = np.where(is_better, onward, at + 0.5 * _held(rest))
     return np.where(_size(misfit(at)) <= _SETTLED, at, np.nan)
+
+
+def _held(rest: Floats) -> Floats:
+    """Return the misfit with nought for slips that have none."""
+    slips, bends = np.split(rest, 2, axis=-1)
+    return np.concatenate([np.where(np.isnan(slips), 0.0, slips), bends], axis=-1)
 
 
 def _size(misfit: Floats) -> Floats:
@@ -296,4 +305,6 @@ def _newton_step(misfit: Callable[[Floats], Floats], at: Floats, rest: Floats) -
     """Return J^-1 rest, the derivatives J by differences along a new first axis."""
     probes = _PROBE * np.eye(at.shape[-1]).reshape(at.shape[-1], *(1,) * (at.ndim - 1), at.shape[-1])
     slopes = np.moveaxis((misfit(at + probes) - rest) / _PROBE, 0, -1)
-    return np.asarray(np.linalg.solve(slopes, rest[..., None])[..., 0], dtype=np.float64)
+    is_usable = np.abs(np.linalg.det(slopes))[..., None, None] > 0.0
+    solved = np.linalg.solve(np.where(is_usable, slopes, np.eye(at.shape[-1])), rest[..., None])
+    return np.asarray(solved[..., 0], dtype=np.float64)
