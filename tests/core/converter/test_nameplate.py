@@ -147,10 +147,11 @@ def test_a_plate_with_its_speed_makes_the_rotor_better_known():
 
 
 @pytest.mark.parametrize(
-    ("rpm", "hertz", "slip"), [(2890.0, 50.0, 0.11 / 3), (1455.0, 50.0, 0.03), (1176.0, 60.0, 0.02)]
+    ("rpm", "hertz", "slip"),
+    [(2890.0, 50.0, 0.11 / 3), (1455.0, 50.0, 0.03), (1176.0, 60.0, 0.02), (440.0, 50.0, 0.12)],
 )
 def test_the_synchronous_speed_is_the_next_above(rpm, hertz, slip):
-    """3000, 1500 and 1200 rpm."""
+    """3000, 1500, 1200 and 500 rpm."""
     assert typical_machine(Nameplate(7.5, 400.0, hertz, rated_speed_rpm=rpm)).rated_slip == pytest.approx(slip)
 
 

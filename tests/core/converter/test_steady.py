@@ -272,6 +272,26 @@ def test_slip_climbs_with_the_load_until_the_motor_stalls_and_stays_so_beyond(fe
     assert stalled.tolist() == (torques > most).tolist()
 
 
+@pytest.mark.parametrize(
+    ("farads", "series", "volts", "torque"),
+    [
+        ((85.4e-6, 144.6e-6, 77.9e-6, 140.5e-6), 0.019 + 0.119j, 263.3, (76.0, 7240.0, 568.0)),
+        ((145.0e-6, 103.3e-6, 71.9e-6, 0.0), 0.066 + 0.13j, 272.2, (76.0, 6577.0, 1675.0)),
+    ],
+)
+def test_a_motor_near_its_limit_is_not_called_stalled_while_the_iron_settles(farads, series, volts, torque):
+    """Two heavily loaded motors, high voltage, many capacitors: with the iron of rated voltage there is no solution."""
+    running = machines(plates(SHED, 4.0, 3.0, 2.2), ("N", "floating", "floating"), np.zeros(3))
+    state = steady_state(
+        utility(SHED, series, series, volts),
+        capacitors(CANS, np.array(farads), 50.0),
+        dataclasses.replace(running, torque=np.array(torque)),
+    )
+    circuit = dataclasses.replace(running.circuit, magnetising_reactance=state.magnetising_reactances)
+    _, positive, negative = to_neutral(state)
+    assert airgap_torque(circuit, state.slips, positive, negative) == pytest.approx(np.array(torque), rel=1e-6)
+
+
 def test_a_missing_figure_makes_its_own_case_missing_and_no_other():
     supply, branches, running = shop(SHED, "N", CANS, 3)
     forces = supply.forces.copy()
@@ -292,6 +312,10 @@ def test_a_lost_neutral_of_an_l1_n_feed_stands_at_the_voltage_of_the_leg():
         np.array([[0.5 - 1j, 0.02 - 0.07j, 0.2 - 0.6j]]),
     )
     assert found == pytest.approx(np.full(4, 230.0), rel=1e-6)
+
+
+def test_a_feed_without_neutral_feeds_no_neutral():
+    assert np.isinf(utility(TRANSFORMER, 0.1, 0.1).impedances).tolist() == [False, False, True, True]
 
 
 def test_the_neutral_conductor_drops_its_own_current():

@@ -209,7 +209,7 @@ def slip_over_resistance(circuit: EquivalentCircuit, power: Floats, voltage: Com
     source = circuit.stator_impedance * share + 1j * circuit.rotor_reactance
     spare = 3.0 * np.abs(voltage * share) ** 2 - 2.0 * source.real * power
     root = np.sqrt(spare**2 - (2.0 * power * np.abs(source)) ** 2)
-    return np.where(spare > 0.0, 2.0 * power / (spare + root), np.nan)
+    return np.asarray(2.0 * power / (spare + root), dtype=np.float64)
 
 
 def saturated(circuit: EquivalentCircuit, iron: Iron, across: Floats) -> EquivalentCircuit:
