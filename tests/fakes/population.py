@@ -1,17 +1,32 @@
 """Random converters on the rig, in steady states, seen by imperfect meters: what the recovery is tried on.
 
 The rig's machine is not the core's (deep bars, another law of saturation, windings that differ), its meters have gain
-and phase errors, steps, and a refresh interval. Everything is drawn from one seed.
+and phase errors, steps, and read one after the other while the supply drifts. Everything is drawn from one seed.
 """
 
-from dataclasses import dataclass, replace
+import math
+from dataclasses import dataclass, fields, replace
 
 import numpy as np
 
 from idlerwatch.core.conductors import Feed, Pair
-from idlerwatch.core.converter.circuit import BankAmmeter, Can, CurrentChannel, Sample, Wiring
+from idlerwatch.core.converter.circuit import (
+    IDLER,
+    BankAmmeter,
+    Can,
+    CurrentChannel,
+    Positions,
+    Sample,
+    Wiring,
+    nominal_positions,
+)
+from idlerwatch.core.converter.learn import Learned, Prior, Recorded, learn
+from idlerwatch.core.converter.nameplate import Nameplate
+from idlerwatch.core.converter.prior import Limits, prior_of
+from idlerwatch.core.converter.recover import Circuit
 from idlerwatch.core.electrical.sequence import TO_COMPONENTS
 from idlerwatch.rig import plant as rig
+from idlerwatch.rig.circuit import BUS, NEUTRAL
 from idlerwatch.rig.machine import Induction
 from idlerwatch.rig.values import Banks, Capacitors, Loads, Motors, Phase, Plant, Source, Starting, View
 
@@ -21,6 +36,11 @@ FEEDS = {
     "line": Feed(Pair("L1", "L2"), 400.0, neutral="none"),
 }
 SETTLING_STEPS = 60
+REGULATED_STEPS = 45
+SUPPLY = (216.0 / 230.0, 253.0 / 230.0)
+"""Between which the supply stands where it enters the converter, over the declared voltage."""
+MEANT = 10
+"""Readings behind each load state that is learned from."""
 
 
 @dataclass(frozen=True)
@@ -35,11 +55,20 @@ class Options:
     gain: float = 0.005
     trimmed: float | None = 0.0005
     smallest_can: float = 0.05
+    largest_can: float | None = None
+    drift: float = 0.002
     is_saturating: bool = True
+    is_unsigned: bool = False
+    drive: float = 0.0
+    least_load: float = 0.0
     has_supply_meter: bool = False
     has_bank_ammeter: bool = False
     has_lines: bool = False
     quantised: bool = True
+
+
+IDEAL = {"asymmetry": 0.0, "capacitor_spread": 0.0, "phase_error": 0.0, "drift": 0.0}
+"""Options of converters and meters without what the model leaves out (with `is_saturating` and `quantised` False)."""
 
 
 @dataclass
@@ -60,6 +89,10 @@ class Population:
     def base(self) -> np.ndarray:
         """Rated current over nominal voltage of each converter's plate. [S]"""
         return rated_current(self.kilowatts, self.plant.feed.line_voltage) / self.plant.feed.leg_voltage
+
+
+DRIVE_SPREAD = 0.1
+"""What is not known of a drive's current, of itself."""
 
 
 def rated_current(kilowatts, line_voltage):
@@ -109,18 +142,10 @@ def draw(options: Options, seed: int) -> Population:
     idler = replace(idler, asymmetry=1.0 + options.asymmetry * chance.uniform(-1.0, 1.0, (n, 3)))
     base = rated_current(kilowatts, feed.line_voltage) / feed.leg_voltage
     pairs = PAIRS[options.feed]
-    least = options.smallest_can
-    siemens = base[:, None] * np.stack(
-        [
-            chance.uniform(max(least, 0.15), 0.35, n),
-            chance.uniform(least, 0.2, n),
-            chance.uniform(least, 0.1, n),
-            chance.uniform(0.3, 0.8, n),
-        ],
-        axis=1,
-    )
+    siemens = base[:, None] * _cans(chance, options)
     marked = siemens / (2.0 * np.pi * 50.0)
     farads = marked * (1.0 + options.capacitor_spread * chance.uniform(-1.0, 1.0, marked.shape))
+    drives = np.zeros((n, 0)) if not options.drive else options.drive * kilowatts[:, None] * 1e3
     motors = _machines(chance, kilowatts[:, None] * chance.uniform(0.12, 0.45, (n, 3)), feed)
     motors = replace(motors, kinetic_energy=0.8 * motors.rated_power)
     plant = Plant(
@@ -143,7 +168,7 @@ def draw(options: Options, seed: int) -> Population:
             0.04,
         ),
         motors=Motors(("a", "b", "c"), ("direct",) * 3, motors),
-        loads=Loads((), (), np.zeros((n, 0))),
+        loads=Loads(("drive",), (None,), drives) if options.drive else Loads((), (), drives),
     )
     gain = options.gain
 
@@ -152,18 +177,30 @@ def draw(options: Options, seed: int) -> Population:
             return 1.0 + gain * chance.uniform(-1.0, 1.0, shape)
         return 1.0 + options.trimmed * chance.standard_normal(shape)
 
+    channels = len(channels_of(options))
     return Population(
         options,
         plant,
         kilowatts,
         marked,
         voltage_gain=voltage_errors((n, 3)),
-        current_gain=(1.0 + 2.0 * gain * chance.uniform(-1.0, 1.0, (n, 4)))
-        * np.exp(1j * np.radians(options.phase_error) * chance.uniform(-1.0, 1.0, (n, 4))),
+        current_gain=(1.0 + 2.0 * gain * chance.uniform(-1.0, 1.0, (n, channels)))
+        * np.exp(1j * np.radians(options.phase_error) * chance.uniform(-1.0, 1.0, (n, channels))),
         line_gain=voltage_errors((n, 3)),
         ammeter_gain=1.0 + gain * chance.uniform(-1.0, 1.0, (n, 1)),
         chance=chance,
     )
+
+
+def _cans(chance, options):
+    """Susceptances over the base admittance; the start bank's is never like the run bank's across the same pair."""
+    n, least = options.count, options.smallest_can
+    if options.largest_can is not None:
+        first, second, third = chance.uniform(least, options.largest_can, (3, n))
+        return np.stack([first, second, third, chance.uniform(1.2, 3.0, n) * np.maximum(first, second)], axis=1)
+    first = chance.uniform(max(least, 0.15), 0.35, n)
+    second, third = chance.uniform(least, 0.2, n), chance.uniform(least, 0.1, n)
+    return np.stack([first, second, third, chance.uniform(np.maximum(0.3, 1.2 * first), 0.8, n)], axis=1)
 
 
 def _source(chance, feed, n):
@@ -197,18 +234,42 @@ class Seen:
 def running(
     population: Population, run_in=None, start_in=None, supply=None, load=None, on=None, faults=None, *, backwards=False
 ):
-    """Let all converters settle in one state; shapes (n,), (n,), (n,), (n, 3), (n, 3)."""
+    """Let all converters settle in one state; shapes (n,), (n,), (n,), (n, 3), (n, 3).
+
+    `supply` is the voltage where the supply enters, over the declared one: the source gives what that takes.
+    """
     plant, chance, n = population.plant, population.chance, population.options.count
-    supply = chance.uniform(0.92, 1.08, n) if supply is None else supply
+    supply = chance.uniform(*SUPPLY, n) if supply is None else supply
     on = chance.random((n, 3)) < 0.5 if on is None else on
-    load = chance.uniform(0.0, 0.9, (n, 3)) if load is None else load
-    state = rig.begin(plant)
-    sense = -1.0 if backwards else 1.0
+    load = chance.uniform(population.options.least_load, 0.9, (n, 3)) if load is None else load
     closed = np.stack(
         [np.ones(n, bool) if run_in is None else run_in, np.zeros(n, bool) if start_in is None else start_in], axis=1
     )
-    state = replace(
-        state,
+    state = _turning(plant, on, closed, -1.0 if backwards else 1.0)
+    orders = replace(rig.no_orders(plant), run=np.ones(n, bool), motor_on=on, motor_load=load, bank_by_hand=closed)
+    if population.options.drive:
+        orders = replace(orders, load_on=chance.random((n, 1)) < 0.7)
+    faults = rig.no_faults(plant) if faults is None else faults
+    nominal = np.abs(plant.source.emf).max(axis=1) / (plant.feed.voltage / (1 if not plant.feed.is_line_feed else 2))
+    faults = replace(faults, supply_ratio=supply / nominal)
+    for count in range(SETTLING_STEPS):
+        state, solution = rig.step(plant, state, orders, faults)
+        if count < REGULATED_STEPS:
+            faults = replace(faults, supply_ratio=faults.supply_ratio * supply / supply_of(plant, solution))
+    return rig.look(plant, state, solution)
+
+
+def supply_of(plant, solution):
+    """Voltage across the fed pair, over the declared one."""
+    second = BUS[plant.fed[1]] if plant.feed.is_line_feed else NEUTRAL
+    return np.abs(solution.nodes[:, BUS[plant.fed[0]]] - solution.nodes[:, second]) / plant.feed.voltage
+
+
+def _turning(plant, on, closed, sense):
+    """Where the search for a steady state begins: everything near its speed."""
+    n = plant.count
+    return replace(
+        rig.begin(plant),
         phase=np.full(n, int(Phase.RUNNING)),
         switch=np.ones(n, bool),
         held=np.ones(n, bool),
@@ -219,57 +280,88 @@ def running(
         motor_on_for=np.full((n, 3), 99.0),
         bank_closed=closed,
     )
-    orders = replace(rig.no_orders(plant), run=np.ones(n, bool), motor_on=on, motor_load=load, bank_by_hand=closed)
-    faults = rig.no_faults(plant) if faults is None else faults
-    nominal = np.abs(plant.source.emf).max(axis=1) / (plant.feed.voltage / (1 if not plant.feed.is_line_feed else 2))
-    faults = replace(faults, supply_ratio=supply / nominal)
-    for _ in range(SETTLING_STEPS):
-        state, solution = rig.step(plant, state, orders, faults)
-    return rig.look(plant, state, solution)
 
 
 def measure(population: Population, view: View, noise: float = 0.0002) -> Seen:
-    """Return what the meters make of a state."""
-    options, chance = population.options, population.chance
+    """Return what the meters make of a state, each at its own instant while the supply drifts."""
+    options, n = population.options, population.options.count
     points, out = view.potentials["leg"], view.currents["leg"]
     legs = points[:, :3]
+    drift = options.drift * population.chance.uniform(-1.0, 1.0, (n, 1))
+
+    def read(values, step=None, order=1):
+        told = values * (1.0 + drift * population.chance.random(values.shape)) ** order
+        told = told * (1.0 + noise * population.chance.standard_normal(values.shape))
+        return told if step is None or not options.quantised else np.round(told / step) * step
+
     hub = points[:, 3:4] if options.feed != "line" else points[:, 0:1]
-    rays = np.abs(legs - hub) * population.voltage_gain
-    channels = channels_of(options)
-    currents = []
-    for index, (leg, across, place) in enumerate(channels):
-        at, flow = (points, out) if place == "leg" else (view.potentials["supply"], view.currents["supply"])
-        voltage = at[:, across[0]] - at[:, across[1]]
-        current = flow[:, leg] * population.current_gain[:, index]
-        power = voltage * current.conj()
-        if options.quantised:
-            power = np.round(power.real) + 1j * np.round(power.imag)
-        told = np.abs(voltage) * (population.voltage_gain[:, leg] if place == "leg" else 1.0)
-        currents.append((power / told).conj())
-    currents = np.stack(currents, axis=1)
-    currents = currents * (1.0 + noise * chance.standard_normal(currents.shape))
-    rays = rays * (1.0 + noise * chance.standard_normal(rays.shape))
-    if options.quantised:
-        rays = np.round(rays, 1)
-    n = options.count
-    lines = np.zeros((n, 0))
-    if options.has_lines or options.feed == "line":
-        pairs = ((1, 2),) if options.feed == "line" else ((0, 1), (1, 2), (2, 0))
-        lines = np.stack(
-            [np.abs(legs[:, a] - legs[:, b]) * population.line_gain[:, k] for k, (a, b) in enumerate(pairs)], axis=1
-        )
-        lines = np.round(lines * (1.0 + noise * chance.standard_normal(lines.shape)), 1)
-    ammeters = np.zeros((n, 0))
-    if options.has_bank_ammeter:
-        ammeters = np.round(np.abs(view.currents["bank:run"][:, 2:3]) * population.ammeter_gain, 2)
+    lines = [np.abs(legs[:, a] - legs[:, b]) for a, b in lines_of(options)]
+    ammeters = np.abs(view.currents["bank:run"][:, 2:3]) if options.has_bank_ammeter else np.zeros((n, 0))
     components = (legs - points[:, 3:4] * (options.feed == "L1-N")) @ TO_COMPONENTS.T
     return Seen(
-        Sample(rays, currents, np.zeros((*currents.shape, 2)), ammeters, lines),
+        Sample(
+            rays=read(np.abs(legs - hub) * population.voltage_gain, 0.1),
+            currents=_currents(population, view, read),
+            spreads=_spreads(population, view),
+            ammeters=read(ammeters * population.ammeter_gain[:, : ammeters.shape[1]], 0.01),
+            lines=read(np.stack([np.zeros(n), *lines], axis=1)[:, 1:] * population.line_gain[:, : len(lines)], 0.1),
+        ),
         np.abs(components[:, 2] / components[:, 1]),
         components,
         np.abs(out[:, :3]).mean(axis=1),
         view,
     )
+
+
+def _currents(population, view, read):
+    """What power and reactive power over voltage make of each channel's current, in watts and var."""
+    options = population.options
+    voltages, currents = [], []
+    for leg, across, place in channels_of(options):
+        points = view.potentials[place]
+        voltages.append(points[:, across[0]] - points[:, across[1]])
+        currents.append(view.currents[place][:, leg] + _distortion(population, view, leg, place) * voltages[-1])
+    voltages, currents = np.stack(voltages, axis=1), np.stack(currents, axis=1)
+    power = read(voltages * (currents * population.current_gain).conj(), order=2)
+    if options.quantised:
+        power = np.round(power.real) + 1j * np.round(power.imag)
+    if options.is_unsigned:
+        power = power.real + 1j * np.abs(power.imag)
+    gains = [population.voltage_gain[:, leg] ** (place == "leg") for leg, _, place in channels_of(options)]
+    return (power / read(np.abs(voltages) * np.stack(gains, axis=1), 0.1)).conj()
+
+
+def _distortion(population, view, leg, place):
+    """What a meter makes wrong of a rectifier's current: up to a tenth of it, active or not, as an admittance."""
+    if not population.options.drive or place != "leg":
+        return 0.0
+    amperes = DRIVE_SPREAD * np.abs(view.currents["machine:drive"][:, leg])
+    real, imaginary = population.chance.uniform(-1.0, 1.0, (2, len(amperes)))
+    return amperes * (real + 1j * imaginary) / population.plant.feed.leg_voltage
+
+
+def _spreads(population, view):
+    channels = channels_of(population.options)
+    spreads = np.zeros((population.options.count, len(channels), 2))
+    if population.options.drive:
+        for index, (leg, _, place) in enumerate(channels):
+            if place == "leg":
+                spreads[:, index] = DRIVE_SPREAD * np.abs(view.currents["machine:drive"][:, leg, None])
+    return spreads
+
+
+def lines_of(options: Options):
+    """Pairs of legs that have a voltmeter besides the rays."""
+    if options.feed == "line":
+        return ((1, 2),)
+    return ((0, 1), (1, 2), (2, 0)) if options.has_lines else ()
+
+
+def measured_for_long(population: Population, view: View, count: int = MEANT) -> Seen:
+    """Return the mean of many readings of one state."""
+    seen = [measure(population, view) for _ in range(count)]
+    means = (np.mean([getattr(one.sample, field.name) for one in seen], axis=0) for field in fields(Sample))
+    return replace(seen[0], sample=Sample(*means))
 
 
 def channels_of(options: Options):
@@ -307,11 +399,6 @@ def wiring_of(population: Population, index: int = 0) -> Wiring:
         "split-phase": (0.0, np.pi, np.pi / 2),
         "line": (0.0, np.pi, 2 * np.pi / 3),
     }[options.feed]
-    lines = ()
-    if options.feed == "line":
-        lines = ((1, 2),)
-    elif options.has_lines:
-        lines = ((0, 1), (1, 2), (2, 0))
     return Wiring(
         rated_current=rated_current(population.kilowatts[index], feed.line_voltage),
         nominal_voltage=feed.leg_voltage,
@@ -325,5 +412,76 @@ def wiring_of(population: Population, index: int = 0) -> Wiring:
         outgoing=made[generated:count],
         supply=made[count:],
         ammeters=(BankAmmeter(0, 2),) if options.has_bank_ammeter else (),
-        lines=lines,
+        lines=lines_of(options),
     )
+
+
+# --------------------------------------------------------------------------
+# What a person and the learning know of each converter
+# --------------------------------------------------------------------------
+
+DISCREPANCY = 0.002
+"""Standard deviation of what the model leaves out, over the rated current."""
+LINE_DISCREPANCY = 0.02
+"""The same of a line voltage. [V]"""
+NOISE = 4e-4
+CHANNEL_NOISE = 8e-4
+"""Repeatability of voltages and ammeters, and of currents out of powers: noise, steps and drift. [1]"""
+
+
+def prior_for(population: Population, wiring: Wiring, index: int = 0) -> Prior:
+    """Return what plate, marking and classes say of one converter."""
+    options = population.options
+    voltmeter = options.gain if options.trimmed is None else math.sqrt(3.0) * options.trimmed
+    limits = Limits(
+        rays=[voltmeter] * len(wiring.rays),
+        channels=[2.0 * options.gain] * len(wiring.channels),
+        ammeters=[options.gain] * len(wiring.ammeters),
+        lines=[voltmeter] * len(wiring.lines),
+    )
+    plate = Nameplate(float(population.kilowatts[index]), population.plant.feed.line_voltage)
+    prior = prior_of(wiring, [plate], limits)
+    return Prior(
+        prior.mean, np.where(prior.standard > 0.0, prior.standard, 1.0)
+    )  # Y0 of a star that floats: of no effect
+
+
+def discrepancy_of(wiring: Wiring, share: float = DISCREPANCY):
+    """Return the standard deviation of each row that the model leaves out. [A, V]"""
+    discrepancy = np.full(wiring.rows, share * wiring.rated_current)
+    discrepancy[wiring.rows - len(wiring.lines) :] = LINE_DISCREPANCY
+    return discrepancy
+
+
+def noise_of(wiring: Wiring):
+    """Return the repeatability of each parameter: (p,)."""
+    noise = np.array([CHANNEL_NOISE if name.startswith("channel") else NOISE for name in wiring.names])
+    constant = [name in IDLER or name.startswith("can") for name in wiring.names]
+    return np.where(constant, 0.0, noise)
+
+
+def in_running(wiring: Wiring) -> Positions:
+    """Return the position of a running converter: the run bank in, the start bank out."""
+    whole = nominal_positions(wiring)
+    start = np.zeros_like(whole.bank_matrices)
+    start[:, 1] = whole.bank_matrices[:, 1]
+    shares = np.array([[float(can.bank != 1) for can in wiring.cans]])
+    return replace(
+        whole, matrices=whole.matrices - start[:, 1], shares=shares, bank_matrices=whole.bank_matrices - start
+    )
+
+
+def one_of(seen: list[Seen], index: int) -> Sample:
+    """Return what one converter showed in several states."""
+    return Sample(*(np.stack([getattr(one.sample, f.name)[index] for one in seen]) for f in fields(Sample)))
+
+
+def learned_from(population: Population, wiring: Wiring, states: list[Seen], index: int) -> Learned:
+    """Learn one converter from load states in which the run bank was in."""
+    recorded = Recorded(one_of(states, index), in_running(wiring), np.zeros(len(states), dtype=np.int64))
+    return learn(wiring, recorded, prior_for(population, wiring, index), discrepancy_of(wiring))
+
+
+def circuit_of(wiring: Wiring, learned: Learned) -> Circuit:
+    """Return what is known of a converter that was learned."""
+    return Circuit(learned.parameters, learned.covariance, noise_of(wiring), discrepancy_of(wiring))
