@@ -20,10 +20,11 @@ from idlerwatch.core.converter.circuit import (
     Wiring,
     nominal_positions,
 )
+from idlerwatch.core.converter.hypotheses import Hypothesis, catalogue
 from idlerwatch.core.converter.learn import Learned, Prior, Recorded, learn
 from idlerwatch.core.converter.nameplate import Nameplate
 from idlerwatch.core.converter.prior import Limits, prior_of
-from idlerwatch.core.converter.recover import Circuit
+from idlerwatch.core.converter.recover import MISSING_SPREAD, Circuit, Recoverer
 from idlerwatch.core.electrical.sequence import TO_COMPONENTS
 from idlerwatch.rig import plant as rig
 from idlerwatch.rig.circuit import BUS, NEUTRAL
@@ -61,6 +62,7 @@ class Options:
     is_unsigned: bool = False
     drive: float = 0.0
     least_load: float = 0.0
+    at_machines: float = 0.0
     has_supply_meter: bool = False
     has_bank_ammeter: bool = False
     has_lines: bool = False
@@ -131,6 +133,8 @@ PAIRS = {
     "line": ((0, 2), (1, 2), (0, 2), (1, 2)),
 }
 """C1 and C2 in the run bank, C3 always in, CS the start bank's."""
+COMPENSATED = {"L1-N": (1, 3), "split-phase": (0, 2), "line": (0, 2)}
+"""Where CM stands, which belongs to the machines: a leg meter sees it, nobody wrote it down."""
 
 
 def draw(options: Options, seed: int) -> Population:
@@ -145,6 +149,7 @@ def draw(options: Options, seed: int) -> Population:
     siemens = base[:, None] * _cans(chance, options)
     marked = siemens / (2.0 * np.pi * 50.0)
     farads = marked * (1.0 + options.capacitor_spread * chance.uniform(-1.0, 1.0, marked.shape))
+    compensation = base * options.at_machines * chance.uniform(0.5, 1.5, n) / (2.0 * np.pi * 50.0)
     drives = np.zeros((n, 0)) if not options.drive else options.drive * kilowatts[:, None] * 1e3
     motors = _machines(chance, kilowatts[:, None] * chance.uniform(0.12, 0.45, (n, 3)), feed)
     motors = replace(motors, kinetic_energy=0.8 * motors.rated_power)
@@ -155,7 +160,12 @@ def draw(options: Options, seed: int) -> Population:
         starting=Starting("pony-motor", (), True, (3, 5), 0.0, 0.9, 0.15, 1000.0),
         star_on_neutral=options.feed == "L1-N",
         idler=idler,
-        capacitors=Capacitors(("C1", "C2", "C3", "CS"), pairs, (0, 0, -1, 1), farads),
+        capacitors=Capacitors(
+            ("C1", "C2", "C3", "CS", "CM"),
+            (*pairs, COMPENSATED[options.feed]),
+            (0, 0, -1, 1, -1),
+            np.column_stack([farads, compensation]),
+        ),
         banks=Banks(
             ("run", "start"),
             np.zeros((2, 5), dtype=bool),
@@ -320,7 +330,8 @@ def _currents(population, view, read):
     for leg, across, place in channels_of(options):
         points = view.potentials[place]
         voltages.append(points[:, across[0]] - points[:, across[1]])
-        currents.append(view.currents[place][:, leg] + _distortion(population, view, leg, place) * voltages[-1])
+        distorted = _distortion(population, view, leg, place) * voltages[-1]
+        currents.append(view.currents[place][:, leg] + distorted + _compensation(population, view, leg, place))
     voltages, currents = np.stack(voltages, axis=1), np.stack(currents, axis=1)
     power = read(voltages * (currents * population.current_gain).conj(), order=2)
     if options.quantised:
@@ -329,6 +340,16 @@ def _currents(population, view, read):
         power = power.real + 1j * np.abs(power.imag)
     gains = [population.voltage_gain[:, leg] ** (place == "leg") for leg, _, place in channels_of(options)]
     return (power / read(np.abs(voltages) * np.stack(gains, axis=1), 0.1)).conj()
+
+
+def _compensation(population, view, leg, place):
+    """What a leg meter sees of the capacitor at the machines, which the rig has at the converter's terminals."""
+    pair = COMPENSATED[population.options.feed]
+    if place != "leg" or leg not in pair:
+        return 0.0
+    points = view.potentials["leg"]
+    through = 2j * np.pi * 50.0 * population.plant.capacitors.farads[:, 4] * (points[:, pair[0]] - points[:, pair[1]])
+    return through if leg == pair[0] else -through
 
 
 def _distortion(population, view, leg, place):
@@ -478,8 +499,36 @@ def one_of(seen: list[Seen], index: int) -> Sample:
 
 def learned_from(population: Population, wiring: Wiring, states: list[Seen], index: int) -> Learned:
     """Learn one converter from load states in which the run bank was in."""
-    recorded = Recorded(one_of(states, index), in_running(wiring), np.zeros(len(states), dtype=np.int64))
-    return learn(wiring, recorded, prior_for(population, wiring, index), discrepancy_of(wiring))
+    sample, prior = one_of(states, index), prior_for(population, wiring, index)
+    recorded = Recorded(sample, in_running(wiring), np.zeros(len(states), dtype=np.int64))
+    if population.options.at_machines and population.options.is_unsigned:
+        return _learned_with_signs(wiring, recorded, prior)
+    return learn(wiring, recorded, prior, discrepancy_of(wiring))
+
+
+def _learned_with_signs(wiring, recorded, prior):
+    """Learn without reactive power, give each state its likeliest sign, and learn again, until no sign changes."""
+    sample, ways = recorded.sample, signed_ways(wiring)
+    unknown = replace(recorded, sample=replace(sample, spreads=sample.spreads + np.array([0.0, MISSING_SPREAD])))
+    learned, which = learn(wiring, unknown, prior, discrepancy_of(wiring)), None
+    for _ in range(8):
+        likeliest = Recoverer(wiring, ways, circuit_of(wiring, learned)).recover(sample).likeliest
+        if np.array_equal(likeliest, which):
+            break
+        which = likeliest
+        learned = learn(wiring, Recorded(sample, ways, which), prior, discrepancy_of(wiring))
+    return learned
+
+
+def signed_ways(wiring: Wiring) -> Positions:
+    """Return the running position with each channel's reactive power one way or the other."""
+    known = catalogue(wiring, (1.0, 0.0), unsigned=range(len(wiring.channels)))
+    wanted = [
+        number
+        for number, way in enumerate(known.hypotheses)
+        if replace(way, flipped=None) == Hypothesis((1.0, 0.0), weight=way.weight)
+    ]
+    return Positions(*(getattr(known.positions, field.name)[wanted] for field in fields(Positions)))
 
 
 def circuit_of(wiring: Wiring, learned: Learned) -> Circuit:
