@@ -1,8 +1,8 @@
 """Which mistake of wiring explains what does not fit: the circuit is learned again under each, and the best is named.
 
 A circuit learned from wrongly wired meters does not fit its own load states: chi-square says so. Each usual mistake is
-a change of the samples or of the wiring that undoes it. A mistake is named when undoing it makes the states fit that did
-not, far better than any other does; otherwise nothing is named, and the misfit alone is told.
+a change of the samples or of the wiring that undoes it. One is named when undoing it makes states fit that did not, and
+far better than any other does; otherwise nothing is named, and the misfit alone is told.
 
 * an ammeter turned round: its current has the other sign;
 * two ammeters swapped: each current belongs to the other voltage (relative to its own it was told);

@@ -178,6 +178,22 @@ def typical_machine(plate: Nameplate) -> Typical:
     )
 
 
+def believed(plate: Nameplate) -> tuple[Nameplate, str]:
+    """Return the plate without its optional figures where these contradict it, and the sentence that says so.
+
+    Examples
+    --------
+    >>> plain, fault = believed(Nameplate(5.5, 240.0, rated_current=15.6))
+    >>> plain.rated_current, fault
+    (None, 'rated_current must be above 15.6 A for 5.5 kW at such a voltage')
+    """
+    try:
+        typical_machine(plate)
+    except ValueError as error:
+        return Nameplate(plate.rated_kw, plate.rated_voltage, plate.frequency), str(error)
+    return plate, ""
+
+
 def zero_admittance(machine: Typical, star_point: str) -> Complexes:
     """Return Y0 of a machine whose star point is on ``N``, or ``floating``. [S]"""
     return np.asarray(1.0 / machine.zero_impedance if star_point == "N" else 0.0, dtype=np.complex128)

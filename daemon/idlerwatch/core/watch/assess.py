@@ -16,8 +16,10 @@ from idlerwatch.core.conductors import LEGS, LINE_PAIRS, Leg
 from idlerwatch.core.values import UNKNOWN, Assessment, Figure, Known, Sample
 from idlerwatch.core.watch.bank_current import bank_current_ratio
 from idlerwatch.core.watch.channel import MISSING, Measured, power_factor
+from idlerwatch.core.watch.circuit import NOTHING, BankPosition, Found
 from idlerwatch.core.watch.derive import Derived
 from idlerwatch.core.watch.estimate import Estimate, stands_still
+from idlerwatch.core.watch.explained import unexplained_current
 from idlerwatch.core.watch.life import LifeState
 from idlerwatch.core.watch.plan import Plan
 from idlerwatch.core.watch.three_phase import (
@@ -39,7 +41,9 @@ Row = tuple[FigureName, Figure]
 LINES: Final = tuple(str(pair) for pair in LINE_PAIRS)
 
 
-def assess(plan: Plan, sample: Sample, derived: Derived, estimate: Estimate, life: LifeState) -> Assessment:
+def assess(
+    plan: Plan, sample: Sample, derived: Derived, estimate: Estimate, life: LifeState, *, found: Found = NOTHING
+) -> Assessment:
     """Return the assessment of one sample; alarms and lamp are left to the alarm step."""
     return Assessment(
         at=sample.at,
@@ -51,9 +55,9 @@ def assess(plan: Plan, sample: Sample, derived: Derived, estimate: Estimate, lif
         loading=life.loading,
         lamp="fine",
         angles=estimate.angles,
-        figures=dict(_figures(plan, derived, estimate, life)),
+        figures=dict(_figures(plan, derived, estimate, life, found)),
         meters=meter_states(plan, derived, life),
-        remarks=tuple(_remarks(plan, derived, estimate)),
+        remarks=(*_remarks(plan, derived, estimate), *found.remarks),
     )
 
 
@@ -74,7 +78,7 @@ def told(measured: Measured, known: Known = "measured") -> Figure:
     return UNKNOWN if math.isnan(value) else Figure(value, K * standard, known)
 
 
-def _figures(plan: Plan, derived: Derived, estimate: Estimate, life: LifeState) -> Iterator[Row]:
+def _figures(plan: Plan, derived: Derived, estimate: Estimate, life: LifeState, found: Found) -> Iterator[Row]:
     supply_ratio = ratio_to(derived.supply.voltage, plan.feed.voltage)
     for leg in LEGS:
         yield from _leg(plan, derived, estimate, leg, supply_ratio)
@@ -86,6 +90,7 @@ def _figures(plan: Plan, derived: Derived, estimate: Estimate, life: LifeState) 
     yield ("converter", "converter", "start_time"), told(Measured(life.start_time, plan.cycle_s / 2.0))
     for bank in plan.banks:
         yield from _bank(plan, derived, estimate, bank.name)
+    yield from _circuit(plan, derived, estimate, found)
     yield ("earthing", "converter", "neutral_earth_voltage"), told(*estimate.neutral_earth)
     for name, power in derived.machines.items():
         yield ("machine", name, "voltage"), told(power.voltage)
@@ -171,10 +176,11 @@ def _unbalances(plan: Plan, derived: Derived, estimate: Estimate) -> Iterator[Ro
     yield ("converter", "converter", "line_voltage_unbalance_rate"), told(line, known)
     yield ("converter", "converter", "phase_voltage_unbalance_rate"), told(legs)
     yield ("converter", "converter", "voltage_unbalance_factor"), told(estimate.unbalance_factor, known)
-    yield ("converter", "converter", "zero_sequence_voltage"), told(zero, "mapped")
-    yield ("converter", "converter", "positive_sequence_voltage"), told(positive, "mapped")
-    yield ("converter", "converter", "negative_sequence_voltage"), told(negative, "mapped")
-    yield ("converter", "converter", "zero_sequence_factor"), told(quotient(zero, positive), "mapped")
+    mapped: Known = "recovered" if known == "recovered" else "mapped"
+    yield ("converter", "converter", "zero_sequence_voltage"), told(zero, mapped)
+    yield ("converter", "converter", "positive_sequence_voltage"), told(positive, mapped)
+    yield ("converter", "converter", "negative_sequence_voltage"), told(negative, mapped)
+    yield ("converter", "converter", "zero_sequence_factor"), told(quotient(zero, positive), mapped)
     currents = tuple(derived.legs[leg].current for leg in LEGS)
     yield ("converter", "converter", "current_unbalance_rate"), told(current_unbalance(currents))
     yield ("converter", "converter", "derating_factor"), told(derating(line), "computed")
@@ -230,6 +236,40 @@ def _bank(plan: Plan, derived: Derived, estimate: Estimate, name: str) -> Iterat
     yield ("bank", name, "current"), told(current)
     yield ("bank", name, "voltage"), told(voltage)
     yield ("bank", name, "current_ratio"), told(*bank_current_ratio(plan, derived, estimate, name))
+
+
+# --------------------------------------------------------------------------
+# The circuit
+# --------------------------------------------------------------------------
+
+
+def _circuit(plan: Plan, derived: Derived, estimate: Estimate, found: Found) -> Iterator[Row]:
+    """Yield what the converter's circuit tells: positions, capacitors, sense of rotation, and what would be usual."""
+    known: Known = "learned" if found.is_learned else "computed"
+    for bank in plan.banks:
+        position = found.banks.get(bank.name, UNDECIDED)
+        yield ("bank", bank.name, "position"), _certain(position.position, known)
+        yield ("bank", bank.name, "position_probability"), _certain(position.probability, known)
+    for name in plan.capacitors:
+        yield ("capacitor", name.lower(), "lost_probability"), _certain(found.lost.get(name, NAN), known)
+        yield ("capacitor", name.lower(), "capacitance_ratio"), told(found.ratios.get(name, MISSING), "learned")
+    for leg in plan.feed.generated_legs:
+        usual = Measured(found.usual.get(f"{leg}-N", NAN), NAN)
+        yield ("leg", leg.lower(), "usual_voltage"), told(usual, "learned")
+    unexplained = unexplained_current(plan.explaining, derived, estimate.points, plan.rotation)
+    yield ("converter", "converter", "backwards_probability"), _certain(found.backwards, known)
+    yield ("converter", "converter", "off_normal"), _certain(found.off_normal, "learned")
+    yield ("converter", "converter", "usual_unbalance_factor"), _certain(found.usual_factor, "learned")
+    yield ("converter", "converter", "circuit_misfit"), _certain(found.misfit, known)
+    yield ("converter", "converter", "unexplained_current_ratio"), told(unexplained, "computed")
+
+
+UNDECIDED: Final = BankPosition(NAN, NAN)
+
+
+def _certain(value: float, known: Known) -> Figure:
+    """Return a figure that has no uncertainty of its own."""
+    return UNKNOWN if math.isnan(value) else Figure(value, NAN, known)
 
 
 # --------------------------------------------------------------------------

@@ -14,6 +14,7 @@ from collections.abc import Iterator, Mapping
 from idlerwatch.core.conductors import LEGS, LINE_PAIRS, NEUTRAL_PAIRS, Conductor, Feed, Pair, read_pair
 from idlerwatch.core.settings.model import Meter, Settings
 from idlerwatch.core.values import FigureKey
+from idlerwatch.core.watch.explained import compile_machines
 from idlerwatch.core.watch.plan import (
     CapacitorPlan,
     ChannelPlan,
@@ -71,6 +72,8 @@ def compile_plan(settings: Settings) -> Plan:
         ),
         banks=settings.bank,
         machines=settings.machine,
+        capacitors=tuple(capacitor.name for capacitor in settings.capacitor),
+        explaining=compile_machines(settings),
         remarks=tuple(_remarks(channels)),
     )
 

@@ -55,7 +55,7 @@ class Estimate:
     measured voltages cannot all be right.
     """
 
-    angles: Literal["measured", "not seen"]
+    angles: Literal["measured", "recovered", "not seen"]
     known: Known
     voltages: Mapping[str, Told]
     components: tuple[Measured, Measured, Measured] = (MISSING, MISSING, MISSING)

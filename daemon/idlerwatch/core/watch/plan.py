@@ -11,6 +11,7 @@ from dataclasses import dataclass
 from typing import Final, Literal
 
 from idlerwatch.core.conductors import LEGS, Conductor, Feed, Leg, Pair
+from idlerwatch.core.converter.circuit import Complexes, Floats
 from idlerwatch.core.settings.model import Bank, Machine, Meter
 from idlerwatch.core.values import FigureKey
 
@@ -108,6 +109,14 @@ class Levels:
     machine_supply: float
 
 
+@dataclass(frozen=True, slots=True, eq=False)
+class Combinations:
+    """Combinations of the described three-phase machines: y2 (c,) [S] and rated current (c,) [A] of each."""
+
+    admittances: Complexes
+    currents: Floats
+
+
 @dataclass(frozen=True, slots=True)
 class Plan:
     """The settings as the chain needs them."""
@@ -141,6 +150,8 @@ class Plan:
     has_neutral_loads: bool
     banks: tuple[Bank, ...]
     machines: tuple[Machine, ...]
+    capacitors: tuple[str, ...]
+    explaining: Combinations | None
     remarks: tuple[str, ...]
 
     @property
