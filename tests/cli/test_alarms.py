@@ -16,7 +16,7 @@ def test_table_lists_the_alarms_in_force_and_says_why_others_are_not():
     result = CliRunner().invoke(command, ["--settings", EXAMPLE])
     assert result.exit_code == 0
     assert "leg-low" in result.output
-    assert "needs the learned circuit" in result.output
+    assert "no bank is open in running" in result.output
 
 
 def test_json_holds_every_alarm_of_the_list_with_its_reason():
@@ -25,7 +25,8 @@ def test_json_holds_every_alarm_of_the_list_with_its_reason():
     assert set(rows) == set(LIST)
     assert rows["leg-low"]["not_available"] == ""
     assert rows["leg-low"]["setpoint"] == pytest.approx(0.9)
-    assert rows["off-normal"]["not_available"] == "needs the learned circuit"
+    assert rows["off-normal"]["not_available"] == ""
+    assert rows["coil-margin"]["not_available"] == "needs the coils' voltages to be followed"
 
 
 def test_settings_file_that_is_not_there_is_a_usage_fault():

@@ -262,6 +262,26 @@ def _sure(scene: Scene) -> str:
     return "" if figure is None or not figure.is_known else _KNOWN.get(figure.known, "")
 
 
+def _sure_from(scene: Scene) -> str:
+    """On what the circuit's judgement rests."""
+    figure = scene.view.figures.get(scene.item.subject.figure) if scene.item.subject.figure else None
+    if figure is None or not figure.is_known:
+        return ""
+    return "from currents and the learned circuit" if figure.known == "learned" else "from currents and the plate"
+
+
+def _capacitor(scene: Scene) -> str:
+    """The capacitor's name as it is written in the settings."""
+    names = {capacitor.name.lower(): capacitor.name for capacitor in scene.settings.capacitor}
+    return names.get(scene.alarm.subject, scene.alarm.subject)
+
+
+def _usual_legs(scene: Scene) -> str:
+    """What the generated legs would read at this load, where a circuit was learned."""
+    found = [(leg, volts(scene.view.value(("leg", leg.lower(), "usual_voltage")))) for leg in LEGS]
+    return ", ".join(f"{leg} {said}" for leg, said in found if said)
+
+
 _WAYS: Final[Mapping[str, str]] = {"mqtt": "the broker", "influx": "the database"}
 
 
@@ -299,6 +319,10 @@ FIELDS: Final[Mapping[str, Callable[[Scene], str]]] = {
     "machine_at": _machine_at,
     "starts": _starts,
     "sure": _sure,
+    "sure_from": _sure_from,
+    "bank": lambda scene: scene.alarm.subject.capitalize(),
+    "capacitor": _capacitor,
+    "usual_legs": _usual_legs,
     "trouble": _trouble,
     "way": lambda scene: _WAYS.get(scene.alarm.subject, scene.alarm.subject),
     "closing": lambda scene: (scene.settings.people.working_hours or "").rpartition("-")[2],

@@ -225,15 +225,22 @@ def test_left_on_counts_unbroken_idling_only():
     assert len(raised(player, "left-on")) == 1
 
 
-def test_per_leg_meters_alone_see_no_angles():
+def test_per_leg_meters_see_unbalance_through_the_circuit_but_not_without_power():
     settings = sheds.slipway().model_copy(update={"alarms": alarm_list(is_line=False)})
-    assert "angles are not seen" in availability(settings)["unbalance"]
+    assert not availability(settings)["unbalance"]
+    voltmeters = tuple(
+        meter.model_copy(update={"channels": tuple(c.model_copy(update={"through": None}) for c in meter.channels)})
+        for meter in settings.meter
+    )
+    found = availability(settings.model_copy(update={"meter": voltmeters}))
+    assert "angles are not seen" in found["unbalance"]
+    assert found["off-normal"] == "the power of L2 and L3 is not measured"
 
 
-def test_what_needs_the_circuit_or_banks_is_not_available():
+def test_what_no_condition_computes_yet_is_not_available():
     found = availability(shed())
-    assert found["off-normal"] == "needs the learned circuit"
-    assert found["start-bank-in"] == "needs bank positions"
+    assert found["bank-stuck-closed"] == "needs bank positions at rest"
+    assert found["start-bank-in"] == "no bank is open in running"
 
 
 def test_without_a_transducer_earth_is_not_available():

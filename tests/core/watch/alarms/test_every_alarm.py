@@ -35,6 +35,14 @@ def window(value):
     return (WindowRow("10min", 0.0, "converter", "converter", {"voltage_unbalance_factor": value, "flagged": 0.0}),)
 
 
+def position(closed):
+    return {("bank", "run", "position"): closed, ("bank", "run", "position_probability"): 0.9999}
+
+
+def converter(**values):
+    return {("converter", "converter", name): value for name, value in values.items()}
+
+
 def case(*, letter="L", before=30, good=None, bad_letter=None, told=(), clear=(), rows=(), clear_rows=(), **bad):
     return {
         "letter": letter,
@@ -54,6 +62,7 @@ def trouble(part, text):
     return (Trouble(0.0, part, text),)
 
 
+LOST = ("capacitor", "c1", "lost_probability")
 NEGATIVE = {("leg", "l2", "active_power"): -900.0}
 
 
@@ -100,7 +109,20 @@ def cases(feed):
         "idler-temperature": case(figures={("machine", "idler", "temperature"): 370.0}),
         "machine-temperature": case(figures={("machine", "planer", "temperature"): 370.0}),
         "starts-too-many": None,
+        "current-unexplained": case(
+            good=converter(unexplained_current_ratio=0.02), figures=converter(unexplained_current_ratio=0.3)
+        ),
     }
+    if not is_line:
+        found |= {
+            "running-backwards": case(
+                good=converter(backwards_probability=0.0001), figures=converter(backwards_probability=0.9999)
+            ),
+            "off-normal": case(good=converter(off_normal=0.002), figures=converter(off_normal=-0.06)),
+            "bank-not-closed": case(good=position(1.0), figures=position(0.0)),
+            "capacitor-lost": case(good={LOST: 0.0001}, figures={LOST: 0.9999}),
+            "capacitor-weak": None,
+        }
     if is_line:
         del found["ammeter-reversed"]  # no meter there stands across a leg and N with its ammeter in the same leg
         found |= {
@@ -164,6 +186,61 @@ def test_starts_too_many_is_raised_by_the_fourth_in_ten_minutes_and_returns():
     assert of(player.events, "starts-too-many")[-1].alarm.state == "normal"
 
 
+def test_weak_capacitor_is_told_after_a_day_and_only_where_it_is_known_well():
+    player = Player(SHEDS["L1-N"](capacitor_weak={"on_delay_s": 20.0, "off_delay_s": 20.0}))
+    ratio = ("capacitor", "c1", "capacitance_ratio")
+    player.play(30, "L", {ratio: 0.99})
+    player.play(40, "L", {ratio: 0.85})
+    player.play(40, "L", {ratio: 0.97})
+    raised, over = of(player.events, "capacitor-weak")
+    assert (raised.alarm.priority, over.alarm.state) == ("low", "normal")
+    assert "C1" in raised.alarm.text
+    assert "85.0 %" in raised.alarm.text
+
+
+def test_start_bank_still_in_is_told_after_two_seconds_as_the_worst_there_is():
+    settings = SHEDS["L1-N"]()
+    (run,) = settings.bank
+    start = run.model_copy(update={"name": "start", "closed_when": ("starting",)})
+    player = Player(settings.model_copy(update={"bank": (run, start)}))
+    found = {("bank", "start", "position"): 1.0, ("bank", "start", "position_probability"): 0.9995}
+    player.play(5, "U", {("bank", "start", "position"): 0.0, ("bank", "start", "position_probability"): 0.9995})
+    player.play(2, "U", found)
+    assert not of(player.events, "start-bank-in")
+    player.play(1, "U", found)
+    (event,) = of(player.events, "start-bank-in")
+    assert event.alarm.priority == "high"
+    assert event.alarm.text.startswith("NOW: stop machines, then converter. Start capacitors are still in")
+    check_text(event.alarm, event.alarm.text)
+
+
+def test_bank_is_not_missed_before_its_control_had_its_time_nor_while_undecided():
+    player = Player(SHEDS["L1-N"]())
+    player.play(2, "U", position(0.0))
+    player.play(200, "U")
+    assert not of(player.events, "bank-not-closed")
+
+
+def test_bank_partly_in_is_not_called_open_but_a_needless_one_is_called_in():
+    settings = SHEDS["L1-N"]()
+    (run,) = settings.bank
+    start = run.model_copy(update={"name": "start", "closed_when": ("starting",)})
+    player = Player(settings.model_copy(update={"bank": (run, start)}))
+    half = {("bank", name, "position"): 0.5 for name in ("run", "start")}
+    half |= {("bank", name, "position_probability"): 0.9999 for name in ("run", "start")}
+    player.play(60, "U", half)
+    assert not of(player.events, "bank-not-closed")
+    assert of(player.events, "start-bank-in")
+
+
+def test_contact_for_the_sequence_tells_a_converter_that_runs_backwards():
+    player = Player(SHEDS["L1-N"]())
+    player.play(5, "U", converter(sequence_right=1.0))
+    player.play(6, "U", converter(sequence_right=0.0))
+    (event,) = of(player.events, "running-backwards")
+    assert "spindle" in event.alarm.text
+
+
 def test_generator_frequency_takes_the_place_of_the_network_s():
     settings = generator()
     assert availability(settings)["supply-frequency"] == "the supply is a generator"
@@ -186,7 +263,7 @@ def test_leading_supply_is_told_on_a_generator_only():
 VERBS = frozenset(
     (
         *("avoid", "ask", "call", "end", "have", "keep", "leave", "let", "look", "make", "note", "plan", "press"),
-        *("stop", "switch", "take", "tell", "touch", "unplug"),
+        *("run", "start", "stop", "switch", "take", "tell", "touch", "unplug"),
     )
 )
 FORBIDDEN = (

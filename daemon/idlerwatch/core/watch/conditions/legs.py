@@ -11,6 +11,7 @@ from typing import Final
 from idlerwatch.core.conductors import LEGS, LINE_PAIRS, Leg, Pair
 from idlerwatch.core.settings.model import Alarm, Settings
 from idlerwatch.core.watch.conditions import means
+from idlerwatch.core.watch.conditions.circuit import lacks_circuit
 from idlerwatch.core.watch.conditions.view import Address, View
 from idlerwatch.core.watch.conditions.watch import CONVERTER, Subject, Watch, figure
 
@@ -132,7 +133,9 @@ def _window(_settings: Settings, _alarm: Alarm) -> tuple[Subject, ...]:
 
 
 def _lacks_lines(settings: Settings) -> str:
-    return "" if means.has_lines(settings) else "the voltages between the legs are not measured: angles are not seen"
+    if means.has_lines(settings) or not lacks_circuit(settings):
+        return ""
+    return "the voltages between the legs are not measured: angles are not seen"
 
 
 def _current_unbalance(_settings: Settings, _alarm: Alarm) -> tuple[Subject, ...]:

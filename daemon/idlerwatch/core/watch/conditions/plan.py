@@ -9,7 +9,7 @@ from dataclasses import dataclass, replace
 from typing import Final
 
 from idlerwatch.core.settings.model import Alarm, Settings
-from idlerwatch.core.watch.conditions import earth, legs, means, starting, supply, watching
+from idlerwatch.core.watch.conditions import circuit, earth, legs, means, starting, supply, watching
 from idlerwatch.core.watch.conditions.memory import Habits
 from idlerwatch.core.watch.conditions.timers import Band, Delays, Place, band_of
 from idlerwatch.core.watch.conditions.view import View
@@ -21,22 +21,16 @@ WATCHES: Final[Mapping[str, Watch]] = {
     **starting.WATCHES,
     **earth.WATCHES,
     **watching.WATCHES,
+    **circuit.WATCHES,
 }
 
 NEEDS: Final[Mapping[str, str]] = {
-    "running-backwards": "needs the learned circuit",
-    "off-normal": "needs the learned circuit",
-    "current-unexplained": "needs the learned circuit",
-    "capacitor-lost": "needs the learned circuit",
-    "capacitor-weak": "needs the learned circuit",
-    "machine-thermal": "needs the learned circuit",
-    "idler-thermal": "needs the learned circuit",
-    "bank-not-closed": "needs bank positions",
-    "bank-stuck-closed": "needs bank positions",
-    "start-bank-in": "needs bank positions",
-    "bank-chatter": "needs bank positions",
-    "bank-reclosed-charged": "needs bank positions",
-    "coil-margin": "needs bank positions",
+    "machine-thermal": "needs the machines' heat to be followed",
+    "idler-thermal": "needs the idler's heat to be followed",
+    "bank-stuck-closed": "needs bank positions at rest",
+    "bank-chatter": "needs bank positions from second to second",
+    "bank-reclosed-charged": "needs bank positions at rest",
+    "coil-margin": "needs the coils' voltages to be followed",
 }
 """What the list watches and no condition computes yet."""
 
