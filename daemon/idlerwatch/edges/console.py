@@ -242,19 +242,50 @@ def _lines(given: Assessment) -> Iterator[tuple[str, str]]:
             }
         ),
     )
-    for measurement, word in (("bank", "bank"), ("machine", "machine")):
+    for measurement in ("bank", "capacitor", "machine"):
         for subject in dict.fromkeys(key[1] for key in given.figures if key[0] == measurement):
-            yield (
-                f"{word} {subject}",
-                joined(
-                    {
-                        "": (given.figure(measurement, subject, "current"), amperes),
-                        " ": (given.figure(measurement, subject, "active_power"), power),
-                    }
-                ),
-            )
+            yield f"{measurement} {subject}", _of_thing(given, measurement, subject)
+    yield "circuit", _circuit(given)
     yield "neutral-earth", told_with_uncertainty(given.figure("earthing", "converter", "neutral_earth_voltage"), volts)
     yield "meters", silent_meters(given)
+
+
+def _of_thing(given: Assessment, measurement: str, subject: str) -> str:
+    """Return what is known of a bank, a capacitor or a machine."""
+    if measurement == "bank":
+        current = given.figure("bank", subject, "current")
+        amps = f", {amperes(current.value)}" if current.is_known else ""
+        return bank_position(given, subject) + amps
+    if measurement == "capacitor":
+        ratio = told_with_uncertainty(given.figure("capacitor", subject, "capacitance_ratio"), percent)
+        lost = given.figure("capacitor", subject, "lost_probability").value
+        return "probably lost" if lost > 0.5 else f"{ratio} of what was learned" if ratio != NOT_MEASURED else ratio
+    return joined(
+        {
+            "": (given.figure(measurement, subject, "current"), amperes),
+            " ": (given.figure(measurement, subject, "active_power"), power),
+        }
+    )
+
+
+def bank_position(given: Assessment, name: str) -> str:
+    """Return a bank's position in words; undecided while the evidence does not suffice."""
+    position = given.figure("bank", name, "position")
+    sure = given.figure("bank", name, "position_probability")
+    if not sure.is_known:
+        return "position not seen"
+    if not position.is_known:
+        return f"undecided (likeliest {percent(min(sure.value, 0.999))} sure)"
+    word = {1.0: "closed", 0.0: "open"}.get(position.value, "partly in: chatter?")
+    return f"{word}, over 99.9 % sure from the circuit"
+
+
+def _circuit(given: Assessment) -> str:
+    """Return how far the converter is off what its circuit makes of this load."""
+    off = _converter(given, "off_normal")
+    if off.is_known:
+        return f"{percent(abs(off.value))} off its normal for this load"
+    return "not learned" if _converter(given, "circuit_misfit").is_known else NOT_MEASURED
 
 
 def _unbalance(given: Assessment) -> str:

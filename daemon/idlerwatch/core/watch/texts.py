@@ -21,6 +21,9 @@ from idlerwatch.core.watch.conditions.view import Address, View
 from idlerwatch.core.watch.texts_data import TEXTS
 
 LONGEST: Final = 240
+MOST_SURE: Final = 0.999
+"""Nothing is called surer than this, since nothing was shown to be."""
+LEAST_LEFT: Final = 0.01
 
 _PART: Final = re.compile(r"\[([^\]]*)\]")
 _FIELD: Final = re.compile(r"\{(\w+)\}")
@@ -320,6 +323,8 @@ FIELDS: Final[Mapping[str, Callable[[Scene], str]]] = {
     "starts": _starts,
     "sure": _sure,
     "sure_from": _sure_from,
+    "odds": lambda scene: f"{100.0 * min(scene.value, MOST_SURE):.1f} %",
+    "left": lambda scene: "is gone" if scene.value < LEAST_LEFT else f"takes {percent(scene.value)} of its current",
     "bank": lambda scene: scene.alarm.subject.capitalize(),
     "capacitor": _capacitor,
     "usual_legs": _usual_legs,

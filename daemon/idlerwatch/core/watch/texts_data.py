@@ -176,13 +176,13 @@ TEXTS: Final[Mapping[str, Text]] = {
     ),
     # ----------------------------------------------------------------- the circuit
     "running-backwards": Text(
-        "start no machine. The idler runs backwards, {value} sure[, {sure_from}]: machines turn the wrong way and a"
+        "start no machine. The idler runs backwards, {odds} sure[, {sure_from}]: machines turn the wrong way and a"
         " spindle's tool can unscrew. Switch the converter off; prove the rotation with a rotation tester.",
         "the idler runs forwards. Prove the rotation with a rotation tester all the same.",
     ),
     "off-normal": Text(
         "have capacitors, contactor and terminals looked at. The converter is {value} off its normal for this load"
-        " since {since} (limit {limit})[: legs {legs}][, usual {usual_legs}].[ {sure_from}.]",
+        " since {since} (limit {limit})[: legs {legs}][, usual {usual_legs}].[ Seen {sure_from}.]",
         "the converter is as usual for its load[: legs {legs}].",
     ),
     "current-unexplained": Text(
@@ -192,22 +192,22 @@ TEXTS: Final[Mapping[str, Text]] = {
     ),
     "bank-not-closed": Text(
         "end the cut, stop the machine. {bank} capacitors are not in[: legs {legs}][, usual {usual_legs}]."
-        " Likely coil, its fuse or contactor. {value} sure[, {sure_from}]. Capacitors stay charged: electrician.",
+        " Likely coil, its fuse or contactor. {odds} sure[, {sure_from}]. Capacitors stay charged: electrician.",
         "{bank} capacitors are in[, legs {legs}].",
     ),
     "start-bank-in": Text(
         "stop machines, then converter. {bank} capacitors are still in[: legs {legs}]. They can burst: keep clear of"
-        " their box. Capacitors stay charged: electrician. {value} sure[, {sure_from}].",
+        " their box. Capacitors stay charged: electrician. {odds} sure[, {sure_from}].",
         "{bank} capacitors are out[, legs {legs}].",
     ),
     "capacitor-lost": Text(
-        "plan a visit of the electrician. {capacitor} has {value} of its microfarads left[ (usual {usual})]"
-        "[; legs {legs}]: lost, or one pole of its contactor open.[ {sure_from}.] Capacitors stay charged.",
+        "plan a visit of the electrician. {capacitor} {left} since {since}[; legs {legs}]: lost, or one pole of"
+        " its contactor open.[ Seen {sure_from}.] Capacitors stay charged.",
         "{capacitor} is in as it should be.",
     ),
     "capacitor-weak": Text(
         "have {capacitor} replaced at the next visit. It has {value} of the microfarads it was learned with"
-        " (limit {limit}).[ {sure_from}.] Capacitors stay charged: electrician.",
+        " (limit {limit}).[ Seen {sure_from}.] Capacitors stay charged: electrician.",
         "{capacitor} has {value} of its microfarads.",
     ),
     # ----------------------------------------------------------- neutral and earth
