@@ -76,7 +76,7 @@ def witnessed(recoverer, sample):
     wiring, circuit = recoverer.wiring, recoverer.circuit
     nominal = np.array([wiring.directions[leg] for leg in wiring.free])
     total = circuit.covariance + np.diag(circuit.noise**2)
-    balance = Balance(wiring, recoverer.positions, np.zeros(1, dtype=np.int64), circuit.parameters[None])
+    balance = Balance(wiring, recoverer.positions, np.zeros(1, dtype=np.int64), circuit.parameters)
     angles, seconds = [], 0.0
     for row in range(len(sample.rays)):
         seen = balance.seen(take(sample, [row]))

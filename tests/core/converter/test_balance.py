@@ -76,13 +76,13 @@ USUAL = dict(
 
 def parameters_of(wiring, **changes):
     values = dict.fromkeys(wiring.names, 0.0) | USUAL | changes
-    return np.array([[values[name] for name in wiring.names]])
+    return np.array([values[name] for name in wiring.names])
 
 
 def somewhere(wiring, rows, seed=4):
     """Random parameters near the usual, samples and angles: all derivatives differ there."""
     rng = np.random.default_rng(seed)
-    parameters = parameters_of(wiring) + 0.02 * rng.standard_normal((rows, len(wiring.names)))
+    parameters = parameters_of(wiring) + 0.02 * rng.standard_normal(len(wiring.names))
     sides = np.array([0.0 if leg == wiring.hub else 1.0 for leg in range(3)])
     ray = wiring.nominal_voltage * (math.sqrt(3.0) if wiring.hub < 3 else 1.0)
     size = wiring.rated_current * rng.uniform(0.2, 0.8, (rows, len(wiring.channels)))
@@ -263,7 +263,7 @@ def test_how_the_rows_follow_the_parameters(wiring):
     parameters, sample, angles = somewhere(wiring, 6)
     positions, which = two_ways(wiring), np.array([0, 1, 0, 1, 0, 1])
     found = Balance(wiring, positions, which, parameters).seen(sample).at(angles).by_parameter()
-    wanted = differences(lambda at: residuals(wiring, positions, which, at, sample, angles), parameters, 1e-6)
+    wanted = differences(lambda at: residuals(wiring, positions, which, at[0], sample, angles), parameters[None], 1e-6)
     exact = [name for name in wiring.names if not name.startswith("asymmetry")]
     columns = [wiring.at[name] for name in exact]
     assert found[:, columns] == pytest.approx(wanted[:, columns], rel=1e-6, abs=1e-5 * wiring.rated_current)
@@ -298,7 +298,7 @@ def test_many_at_once_equal_each_alone(wiring):
     together = Balance(wiring, positions, which, parameters).seen(sample).at(angles)
     for row in range(5):
         one = Sample(*(getattr(sample, f.name)[row : row + 1] for f in fields(Sample)))
-        alone = Balance(wiring, positions, which[row : row + 1], parameters[row : row + 1]).seen(one)
+        alone = Balance(wiring, positions, which[row : row + 1], parameters).seen(one)
         point = alone.at(angles[row : row + 1])
         for name in ("residuals", "by_angle", "by_ray", "by_parameter", "strain"):
             assert getattr(together, name)()[row] == pytest.approx(getattr(point, name)()[0], rel=1e-10, abs=1e-10)

@@ -68,7 +68,7 @@ def world(wiring, parameters, states=12, seed=3):
         np.zeros((states, 0)),
         np.zeros((states, 0)),
     )
-    balance = Balance(wiring, nominal_positions(wiring), np.zeros(states, dtype=np.int64), parameters[None])
+    balance = Balance(wiring, nominal_positions(wiring), np.zeros(states, dtype=np.int64), parameters)
     taken = balance.seen(blank).at(angles).residuals().reshape(states, count, 2)
     errors = np.array(
         [
@@ -137,7 +137,7 @@ def test_the_optimum_is_where_another_minimiser_finds_it():
 
     def misfit(unknowns):
         parameters, angles = prior.mean + prior.standard * unknowns[:size], unknowns[size:].reshape(-1, 2)
-        point = Balance(TIED, kept.positions, kept.which, parameters[None]).seen(told).at(angles)
+        point = Balance(TIED, kept.positions, kept.which, parameters).seen(told).at(angles)
         away = (angles - nominal) / ANGLE_PRIOR
         return np.concatenate([(point.residuals() / rows).ravel(), unknowns[:size], away.ravel()])
 

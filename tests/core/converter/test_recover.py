@@ -148,7 +148,7 @@ def test_the_truth_of_a_converter_solved_by_torques_comes_back():
 def optimum(wiring, positions, known, sample, row, hypothesis):
     """Angles that make the same weighted sum least: whitened residuals and the angles' prior, weights as they end."""
     which = np.array([hypothesis])
-    balance = Balance(wiring, positions, which, known.parameters[None])
+    balance = Balance(wiring, positions, which, known.parameters)
     seen = balance.seen(take(sample, [row]))
     nominal = np.array([wiring.directions[leg] for leg in wiring.free])
     weights = weights_of(wiring, positions, known, sample, row, hypothesis)
@@ -162,7 +162,7 @@ def optimum(wiring, positions, known, sample, row, hypothesis):
 
 def weights_of(wiring, positions, known, sample, row, hypothesis):
     """The weights: the inverse of what parameters, discrepancy and sample spread, where one step leads (derived)."""
-    seen = Balance(wiring, positions, np.array([hypothesis]), known.parameters[None]).seen(take(sample, [row]))
+    seen = Balance(wiring, positions, np.array([hypothesis]), known.parameters).seen(take(sample, [row]))
     nominal = np.array([[wiring.directions[leg] for leg in wiring.free]])
     diagonal = known.discrepancy**2
     point = seen.at(nominal)
@@ -276,8 +276,12 @@ def in_world(wiring, drawn, legs, discrepancy):
     )
     gainless = drawn.copy()
     gainless[:, len(IDLER) : wiring.at["can_0"]] = 0.0
-    balance = Balance(wiring, nominal_positions(wiring), np.zeros(count, dtype=np.int64), gainless)
-    taken = balance.seen(blank).at(np.tile(np.angle(legs[1:]), (count, 1))).residuals() - discrepancy
+    positions, which, angles = nominal_positions(wiring), np.zeros(1, dtype=np.int64), np.angle(legs[1:])[None]
+    one = take(blank, slice(0, 1))
+    taken = np.concatenate(
+        [Balance(wiring, positions, which, world).seen(one).at(angles).residuals() for world in gainless]
+    )
+    taken = taken - discrepancy
     column = {name: drawn[:, place] for name, place in wiring.at.items()}
     rays = np.abs(legs) / (1.0 - np.stack([column[f"ray_{leg}"] for leg in range(3)], axis=1))
     errors = [column[f"channel_{k}_gain"] + 1j * column[f"channel_{k}_phase"] for k in range(2)]

@@ -41,13 +41,13 @@ _SWAPPED: Final = [0, 2, 1]
 
 
 class Balance:
-    """The equations of one wiring for rows that each have a position and parameters.
+    """The equations of one wiring for rows that each have a position.
 
     Parameters
     ----------
     positions
         The hypotheses; `which` (b,) says which of them each row has.
-    parameters : (b, p) or (1, p)
+    parameters : (p,)
     """
 
     def __init__(self, wiring: Wiring, positions: Positions, which: NDArray[np.int64], parameters: Floats) -> None:
@@ -68,24 +68,24 @@ class Balance:
         self._place_positions(positions, which)
 
     def _place_parameters(self) -> None:
-        wiring, parameters = self.wiring, self._parameters
-        named = {name: parameters[:, wiring.at[name]] for name in IDLER}
+        wiring = self.wiring
+        named = {name: float(self._parameters[wiring.at[name]]) for name in IDLER}
         self.g1, self.b1, self.g2 = named["g1"], named["b1"], named["g2"]
         self.friction, self.braking = named["friction"], named["braking"]
         self.bending = self._block("saturation_1", len(KNEES))
-        self.y0 = (named["g0"] - 1j * named["b0"]) * wiring.tied
-        self.y2 = named["g2"] - 1j * named["b2"]
+        self.y0 = complex(named["g0"], -named["b0"]) * wiring.tied
+        self.y2 = complex(named["g2"], -named["b2"])
         self.scale = 1.0 + 0.5 * (self._block("asymmetry_1", 2) @ _SPREAD)
-        self.kept = np.ones((len(parameters), 3))
-        self.kept[:, self.rays] = 1.0 - self._block(f"ray_{wiring.rays[0]}", len(wiring.rays))
+        self.kept = np.ones(3)
+        self.kept[self.rays] = 1.0 - self._block(f"ray_{wiring.rays[0]}", len(wiring.rays))
         errors = self._block("channel_0_gain", 2 * len(wiring.channels))
-        self._told_scale = 1.0 - errors[:, 0::2] - 1j * errors[:, 1::2]
+        self._told_scale = 1.0 - errors[0::2] - 1j * errors[1::2]
         self._ammeter_scale = 1.0 - self._block("ammeter_0", len(wiring.ammeters))
         self._line_scale = 1.0 - self._block("line_0", len(wiring.lines))
 
     def _block(self, first: str, count: int) -> Floats:
         start = self.wiring.at[first] if count else 0
-        return self._parameters[:, start : start + count]
+        return self._parameters[start : start + count]
 
     def _place_positions(self, positions: Positions, which: NDArray[np.int64]) -> None:
         wiring = self.wiring
@@ -118,7 +118,7 @@ class Balance:
         """Return the equations with what b samples say put in."""
         signed = sample.currents.real + 1j * (sample.currents.imag * self._signs)
         reals = [
-            np.nan_to_num(magnitudes) * scale
+            _filled(magnitudes) * scale
             for magnitudes, scale in ((sample.ammeters, self._ammeter_scale), (sample.lines, self._line_scale))
             if magnitudes.shape[-1]
         ]
@@ -144,15 +144,16 @@ class Seen:
 
 @dataclass(frozen=True, slots=True)
 class _Flows:
-    """The idler's sequences: components (b, 3) it sees, its admittances (b, 3), and how they bend."""
+    """The idler's sequences: components (b, 3) it sees, its admittances (b, 3), and what they follow."""
 
     components: Complexes
     admittances: Complexes
     square: Floats
     ratio: Floats
+    eased: Floats
     share: Floats
     bend: Floats
-    bend_slope: Floats
+    bent: Floats
 
 
 class Point:
@@ -176,20 +177,21 @@ class Point:
         components = (self.potentials * balance.scale) @ _FROM_LEGS
         if balance.has_mirrored:
             components = np.where(balance.mirrored, components[:, _SWAPPED], components)
-        squares = components.real**2 + components.imag**2 + _TINY
-        square = squares[:, 1]
-        ratio = np.maximum(np.sqrt(square) / balance.wiring.nominal_voltage, LEAST_RATIO)
+        squares = components.real**2 + components.imag**2
+        square = squares[:, 1] + _TINY
+        height = np.maximum(square / balance.wiring.nominal_voltage**2, LEAST_RATIO**2)
         share = np.minimum(squares[:, 2] / square, LARGEST_SHARE)
+        ratio = np.sqrt(height)
         bent = np.maximum(0.0, ratio[:, None] - KNEES)
         bend = bent * bent - _AT_NOMINAL
-        conductance = balance.g1 * (1.0 + balance.friction * (1.0 / ratio**2 - 1.0))
-        conductance = conductance + balance.braking * balance.g2 * share
-        susceptance = balance.b1 * (1.0 + (balance.bending * bend).sum(axis=1))
+        eased = 1.0 / height - 1.0
+        conductance = balance.g1 + (balance.g1 * balance.friction) * eased + (balance.braking * balance.g2) * share
+        susceptance = balance.b1 + balance.b1 * (bend @ balance.bending)
         admittances = np.empty_like(components)
         admittances[:, 0], admittances[:, 2] = balance.y0, balance.y2
         admittances[:, 1] = conductance - 1j * susceptance
         admittances *= balance.wiring.base
-        return _Flows(components, admittances, square, ratio, share, bend, 2.0 * bent)
+        return _Flows(components, admittances, square, ratio, eased, share, bend, bent)
 
     def _take(self) -> Complexes:
         """Return what idler and capacitors take from each leg: (b, 3)."""
@@ -199,12 +201,10 @@ class Point:
     def _to_legs(self, flows: Complexes) -> Complexes:
         """Return currents of the legs from those of the sequences: (b, ..., 3)."""
         balance = self._balance
-        spread = (slice(None), *((None,) * (flows.ndim - 2)))
         if balance.has_mirrored:
-            flows = np.where(
-                balance.mirrored[spread] if flows.ndim > 2 else balance.mirrored, flows[..., _SWAPPED], flows
-            )
-        currents: Complexes = (flows @ _TO_LEGS) * balance.scale[spread]
+            mirrored = balance.mirrored[:, None] if flows.ndim > 2 else balance.mirrored
+            flows = np.where(mirrored, flows[..., _SWAPPED], flows)
+        currents: Complexes = (flows @ _TO_LEGS) * balance.scale
         return currents
 
     def strain(self) -> Floats:
@@ -263,7 +263,7 @@ class Point:
         """Return how the rows follow the gains of the rays: (b, rays, rows)."""
         balance = self._balance
         rays = balance.rays
-        return self._by_moves(-self.potentials[:, rays] / balance.kept[:, rays], rays)
+        return self._by_moves(-self.potentials[:, rays] / balance.kept[rays], rays)
 
     def _by_moves(self, moves: Complexes, legs: Index) -> Floats:
         """Return how the rows follow moves (b, q) of the potentials of single legs (q): (b, q, rows)."""
@@ -288,7 +288,7 @@ class Point:
     def _taken_by(self, moves: Complexes, legs: Index) -> Complexes:
         """Return how what idler and capacitors take follows moves of single legs: (b, q, 3)."""
         balance, flows = self._balance, self._flows
-        scaled = moves * balance.scale[:, legs]
+        scaled = moves * balance.scale[legs]
         components = scaled[:, :, None] * _FROM_LEGS[legs]
         if balance.has_mirrored:
             components = np.where(balance.mirrored[:, :, None], components[..., _SWAPPED], components)
@@ -299,18 +299,22 @@ class Point:
 
     def _bent_by(self, components: Complexes) -> Complexes:
         """Return how the positive-sequence admittance follows moves of the components (b, q, 3): (b, q)."""
-        balance, flows = self._balance, self._flows
-        along = (flows.components.conj()[:, None, 1:] * components[..., 1:]).real
-        square = flows.square[:, None]
-        ratio, share = flows.ratio[:, None], flows.share[:, None]
-        nominal = balance.wiring.nominal_voltage
-        ratio_move = np.where(ratio > LEAST_RATIO, along[..., 0] / (ratio * nominal**2), 0.0)
-        share_move = np.where(share < LARGEST_SHARE, 2.0 * (along[..., 1] - share * along[..., 0]) / square, 0.0)
-        conductance = (-2.0 * balance.g1 * balance.friction)[:, None] / ratio**3 * ratio_move
-        conductance += (balance.braking * balance.g2)[:, None] * share_move
-        susceptance = (balance.b1 * (balance.bending * flows.bend_slope).sum(axis=1))[:, None] * ratio_move
-        bent: Complexes = (conductance - 1j * susceptance) * balance.wiring.base
+        flows = self._flows
+        along = (flows.components.conj()[:, None, 1:] * components[..., 1:]).real / flows.square[:, None, None]
+        by_ratio, by_share = self._slopes
+        own = along[..., 0]
+        bent: Complexes = by_ratio[:, None] * own + by_share[:, None] * (along[..., 1] - flows.share[:, None] * own)
         return bent
+
+    @cached_property
+    def _slopes(self) -> tuple[Complexes, Floats]:
+        """How the positive-sequence admittance follows ln V1 and half of (V2/V1)^2; nothing beyond the laws' limits."""
+        balance, flows = self._balance, self._flows
+        base = balance.wiring.base
+        iron = flows.ratio * (2.0 * flows.bent @ balance.bending)
+        by_ratio = (-2.0 * balance.g1 * balance.friction * (flows.eased + 1.0) - 1j * balance.b1 * iron) * base
+        by_share = np.where(flows.share < LARGEST_SHARE, 2.0 * balance.braking * balance.g2 * base, 0.0)
+        return np.where(flows.ratio > LEAST_RATIO, by_ratio, 0.0), by_share
 
     def _real_by_moves(self, moves: Complexes, legs: Index) -> list[Floats]:
         balance, rows = self._balance, []
@@ -356,14 +360,13 @@ class Point:
         sequences = np.zeros((len(positive), len(IDLER), 3), dtype=np.complex128)
         if balance.wiring.tied:
             sequences[:, 0, 0], sequences[:, 1, 0] = zero, -1j * zero
-        eased = 1.0 / flows.ratio**2 - 1.0
-        sequences[:, 2, 1] = positive * (1.0 + balance.friction * eased)
-        sequences[:, 3, 1] = -1j * positive * (1.0 + (balance.bending * flows.bend).sum(axis=1))
+        sequences[:, 2, 1] = positive * (1.0 + balance.friction * flows.eased)
+        sequences[:, 3, 1] = -1j * positive * (1.0 + flows.bend @ balance.bending)
         sequences[:, 4, 1] = positive * balance.braking * flows.share
         sequences[:, 4, 2] = negative
         sequences[:, 5, 2] = -1j * negative
         sequences[:, 6:8, 1] = (-1j * positive * balance.b1)[:, None] * flows.bend
-        sequences[:, 8, 1] = positive * balance.g1 * eased
+        sequences[:, 8, 1] = positive * balance.g1 * flows.eased
         sequences[:, 9, 1] = positive * balance.g2 * flows.share
         taken = self._to_legs(sequences)
         taken[:, 10:] = self._taken_by_asymmetry()
@@ -412,10 +415,10 @@ class Point:
         wiring = self._balance.wiring
         row = 2 * (self._balance.first + self._balance.fed_count)
         for index in range(len(wiring.ammeters)):
-            slopes[:, wiring.at[f"ammeter_{index}"], row + index] = np.nan_to_num(self._sample.ammeters[:, index])
+            slopes[:, wiring.at[f"ammeter_{index}"], row + index] = _filled(self._sample.ammeters[:, index])
         row += len(wiring.ammeters)
         for index in range(len(wiring.lines)):
-            slopes[:, wiring.at[f"line_{index}"], row + index] = np.nan_to_num(self._sample.lines[:, index])
+            slopes[:, wiring.at[f"line_{index}"], row + index] = _filled(self._sample.lines[:, index])
 
     def loose(self) -> Floats | None:
         """Return the rows that one standard deviation of a bank's unknown share makes (b, rows); None without one."""
@@ -429,6 +432,11 @@ def _index(numbers: Sequence[int]) -> Index:
     if not numbers or list(numbers) != list(range(numbers[0], numbers[-1] + 1)):
         return list(numbers)
     return slice(numbers[0], numbers[-1] + 1)
+
+
+def _filled(values: Floats) -> Floats:
+    """Return values with nothing for what is missing."""
+    return np.where(np.isnan(values), 0.0, values)
 
 
 def _times(matrix: Complexes, vector: Complexes) -> Complexes:

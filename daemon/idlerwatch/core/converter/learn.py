@@ -137,14 +137,14 @@ class _Search:
         return self._at(self._prior.mean, angles)
 
     def _at(self, parameters: Floats, angles: Floats) -> _State:
-        balance = Balance(self._wiring, self._positions, self._which, parameters[None])
+        balance = Balance(self._wiring, self._positions, self._which, parameters)
         residuals = balance.seen(self._sample).at(angles).residuals()
         cost = float((residuals**2 * self._weights).sum() + (((angles - self._nominal) / ANGLE_PRIOR) ** 2).sum())
         cost += float((((parameters - self._prior.mean) / self._prior.standard) ** 2).sum())
         return _State(parameters, angles, residuals, cost)
 
     def equations(self, state: _State) -> _Equations:
-        balance = Balance(self._wiring, self._positions, self._which, state.parameters[None])
+        balance = Balance(self._wiring, self._positions, self._which, state.parameters)
         point = balance.seen(self._sample).at(state.angles)
         by_angle, by_parameter = point.by_angle(), point.by_parameter()
         weighted = by_parameter * self._weights[:, None, :]

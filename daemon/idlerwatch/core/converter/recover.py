@@ -137,7 +137,7 @@ class Recoverer:
         found = self._balances.get(count)
         if found is None:
             which = np.tile(np.arange(self._hypotheses), count)
-            found = self._balances[count] = Balance(self.wiring, self.positions, which, self.circuit.parameters[None])
+            found = self._balances[count] = Balance(self.wiring, self.positions, which, self.circuit.parameters)
         return found
 
     def _part(self, sample: Sample) -> dict[str, Any]:
@@ -157,9 +157,8 @@ class Recoverer:
         for _ in range(SETTLING):
             by_angle = point.by_angle()
             weighted = by_angle @ weights
-            angles, normal = self._step(by_angle, weighted, point.residuals(), angles)
+            angles, covariance = self._step(by_angle, weighted, point.residuals(), angles)
             point = seen.at(angles)
-        covariance = np.asarray(np.linalg.inv(normal), dtype=np.float64)
         judged = self._judged(point, angles, spread=spread, weights=weights, by_angle=by_angle, covariance=covariance)
         best = judged["log_likelihood"].reshape(count, -1).argmax(axis=1)
         at = best + np.arange(count) * self._hypotheses
@@ -169,10 +168,11 @@ class Recoverer:
         return shaped | {"likeliest": best, "quantities": quantities, "standards": standards}
 
     def _step(self, by_angle: Floats, weighted: Floats, residuals: Floats, angles: Floats) -> tuple[Floats, Floats]:
-        """Return the angles one Gauss-Newton step on, and the normal matrix."""
+        """Return the angles one Gauss-Newton step on, and the inverse of the normal matrix."""
         normal = weighted @ by_angle.swapaxes(-1, -2) + self._prior
         pull = (weighted @ residuals[..., None])[..., 0] + (angles - self._nominal) / ANGLE_PRIOR**2
-        return angles - np.linalg.solve(normal, pull[..., None])[..., 0], normal
+        inverse = _inverse(normal)
+        return angles - (inverse @ pull[..., None])[..., 0], inverse
 
     def _judged(
         self, point: Point, angles: Floats, *, spread: Floats, weights: Floats, by_angle: Floats, covariance: Floats
@@ -181,7 +181,7 @@ class Recoverer:
         residuals = point.residuals()
         chi_square = (residuals * (weights @ residuals[..., None])[..., 0]).sum(axis=-1)
         chi_square += ((angles - self._nominal) ** 2).sum(axis=-1) / ANGLE_PRIOR**2
-        scale = np.log(np.linalg.det(spread)) - np.log(np.linalg.det(covariance))
+        scale = -np.log(np.linalg.det(weights) * _determinant(covariance))
         left = np.einsum("bii->bi", spread) - ((covariance @ by_angle) * by_angle).sum(axis=-2)
         return {
             "chi_square": chi_square,
@@ -209,6 +209,25 @@ class Recoverer:
 def take(sample: Sample, rows: object) -> Sample:
     """Return some of the samples, or each of them several times: `rows` indexes the leading axis."""
     return Sample(*(getattr(sample, field.name)[rows] for field in fields(Sample)))
+
+
+def _determinant(matrices: Floats) -> Floats:
+    """Return determinants of matrices of one or two rows: (..., k, k) -> (...)."""
+    if matrices.shape[-1] == 1:
+        return matrices[..., 0, 0]
+    product: Floats = matrices[..., 0, 0] * matrices[..., 1, 1] - matrices[..., 0, 1] * matrices[..., 1, 0]
+    return product
+
+
+def _inverse(matrices: Floats) -> Floats:
+    """Return the inverses of matrices of one or two rows, which LAPACK would take far longer to be called for."""
+    if matrices.shape[-1] == 1:
+        return 1.0 / matrices
+    inverse = np.empty_like(matrices)
+    inverse[..., 0, 0], inverse[..., 1, 1] = matrices[..., 1, 1], matrices[..., 0, 0]
+    inverse[..., 0, 1], inverse[..., 1, 0] = -matrices[..., 0, 1], -matrices[..., 1, 0]
+    inverse /= _determinant(matrices)[..., None, None]
+    return inverse
 
 
 def _row_covariance(by_parameter: Floats, total: Floats, point: Point, diagonal: Floats) -> Floats:

@@ -108,7 +108,7 @@ def _innovation(
     parameters = circuit.parameters.copy()
     start = wiring.at["can_0"]
     parameters[start : start + len(wiring.cans)] += change
-    seen = Balance(wiring, positions, np.zeros(1, dtype=np.int64), parameters[None]).seen(sample)
+    seen = Balance(wiring, positions, np.zeros(1, dtype=np.int64), parameters).seen(sample)
     nominal = np.array([[wiring.directions[leg] for leg in wiring.free]])
     diagonal = circuit.discrepancy**2 + row_spreads(wiring, sample)[0] ** 2
     angles = nominal

@@ -39,7 +39,7 @@ def usual_potentials(wiring: Wiring, positions: Positions, sample: Sample, param
     """
     generated = [channel.leg for channel in wiring.generated]
     count = len(sample.rays)
-    balance = Balance(wiring, positions, np.zeros(count, dtype=np.int64), parameters[None])
+    balance = Balance(wiring, positions, np.zeros(count, dtype=np.int64), parameters)
     angles = np.tile([wiring.directions[leg] for leg in wiring.free], (count, 1))
     rays, step = sample.rays, np.zeros((count, 2 * len(generated)))
     for _ in range(ITERATIONS):
@@ -58,7 +58,7 @@ def _step(balance: Balance, sample: Sample, angles: Floats, generated: list[int]
     point = balance.seen(sample).at(angles)
     rows = 2 * len(generated)
     places = [wiring.rays.index(leg) for leg in generated]
-    by_size = -point.by_ray()[:, places, :rows] * balance.kept[:, generated, None]
+    by_size = -point.by_ray()[:, places, :rows] * balance.kept[generated][None, :, None]
     slopes = np.concatenate([point.by_angle()[:, :, :rows], by_size], axis=1).swapaxes(1, 2)
     return _bounded(np.linalg.solve(slopes, -point.residuals()[:, :rows, None])[..., 0])
 
