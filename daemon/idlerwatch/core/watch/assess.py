@@ -253,7 +253,7 @@ def _circuit(plan: Plan, derived: Derived, estimate: Estimate, found: Found) -> 
     for name in plan.capacitors:
         yield ("capacitor", name.lower(), "lost_probability"), _certain(found.lost.get(name, NAN), known)
         yield ("capacitor", name.lower(), "capacitance_ratio"), told(found.ratios.get(name, MISSING), "learned")
-    for leg in plan.feed.generated_legs:
+    for leg in plan.generated:
         usual = Measured(found.usual.get(f"{leg}-N", NAN), NAN)
         yield ("leg", leg.lower(), "usual_voltage"), told(usual, "learned")
     unexplained = unexplained_current(plan.explaining, derived, estimate.points, plan.rotation)

@@ -16,7 +16,8 @@ nothing that compares with a normal.
 
 import math
 from collections.abc import Mapping
-from dataclasses import dataclass, field, replace
+from dataclasses import dataclass, replace
+from types import MappingProxyType
 from typing import Final, NamedTuple
 
 import numpy as np
@@ -79,16 +80,18 @@ class Judge:
     remark: str = ""
 
 
-@dataclass(frozen=True, slots=True, eq=False)
-class CircuitState:
-    """What is remembered from sample to sample; the belief begins anew with each run of the converter."""
+class CircuitState(NamedTuple):
+    """What is remembered from sample to sample; the belief begins anew with each run of the converter.
+
+    `tracked` and `last` are the load at the last state taken for the capacitors and at the last sample.
+    """
 
     belief: Belief
     running_since: float = math.nan
     tracking: Tracking | None = None
     tracked_at: float = -math.inf
-    tracked: Floats = field(default_factory=lambda: np.zeros(0))
-    last: Floats = field(default_factory=lambda: np.zeros(0))
+    tracked: Floats = np.zeros(0)
+    last: Floats = np.zeros(0)
 
 
 class BankPosition(NamedTuple):
@@ -98,22 +101,21 @@ class BankPosition(NamedTuple):
     probability: float
 
 
-@dataclass(frozen=True, slots=True)
-class Found:
+class Found(NamedTuple):
     """What the circuit says of one sample; empty where there is none or the converter does not run."""
 
     is_recovered: bool = False
     is_learned: bool = False
-    voltages: Mapping[str, Measured] = field(default_factory=dict)
+    voltages: Mapping[str, Measured] = MappingProxyType({})
     components: tuple[Measured, Measured, Measured] = (MISSING, MISSING, MISSING)
     unbalance_factor: Measured = MISSING
     points: Mapping[Conductor, complex] | None = None
-    banks: Mapping[str, BankPosition] = field(default_factory=dict)
-    lost: Mapping[str, float] = field(default_factory=dict)
-    ratios: Mapping[str, Measured] = field(default_factory=dict)
+    banks: Mapping[str, BankPosition] = MappingProxyType({})
+    lost: Mapping[str, float] = MappingProxyType({})
+    ratios: Mapping[str, Measured] = MappingProxyType({})
     backwards: float = math.nan
     misfit: float = math.nan
-    usual: Mapping[str, float] = field(default_factory=dict)
+    usual: Mapping[str, float] = MappingProxyType({})
     usual_factor: float = math.nan
     off_normal: float = math.nan
     remarks: tuple[str, ...] = ()
@@ -230,15 +232,15 @@ def judge_circuit(
 ) -> tuple[CircuitState, Found]:
     """Return what the circuit says of one sample, and the state after it."""
     if judge is None or life.state != "running":
-        return replace(state, running_since=math.nan), NOTHING
+        return state._replace(running_since=math.nan), NOTHING
     if life.since != state.running_since:
-        state = replace(state, belief=begin_belief(len(judge.weights)), running_since=life.since)
+        state = state._replace(belief=begin_belief(len(judge.weights)), running_since=life.since)
     given = circuit_sample(judge.plan, sample, derived)
     if not _is_sound(judge.plan, given) or not derived.generated >= LEAST_HEIGHT or life.loading == "machine starting":
-        return state, replace(NOTHING, remarks=_always(judge))
+        return state, NOTHING._replace(remarks=_always(judge))
     recovery = judge.recoverer.recover(given)
     evidence = recovery.log_likelihood[0] + _told_by_contacts(judge, derived)
-    state = replace(state, belief=believe(state.belief, evidence))
+    state = state._replace(belief=believe(state.belief, evidence))
     state = _tracked(judge, state, given, sample.at)
     return state, _found(judge, state, given, recovery)
 
@@ -247,13 +249,12 @@ def _is_sound(own: CircuitPlan, given: CircuitSample) -> bool:
     """Return whether a sample can be a running converter's: every voltage and current there, none absurd."""
     wiring = own.wiring
     rays = given.rays[0, list(wiring.rays)] / wiring.nominal_voltage
-    amperes = np.concatenate([np.abs(given.currents[0]), np.nan_to_num(given.ammeters[0])])
-    volts = np.nan_to_num(given.lines[0]) / wiring.nominal_voltage
-    return bool(
-        (rays > LEAST_RAY).all()
-        and (rays < MOST_VOLTS).all()
-        and (amperes < MOST_AMPERES * wiring.rated_current).all()
-        and (volts < MOST_VOLTS).all()
+    amperes = (*map(abs, given.currents[0].tolist()), *given.ammeters[0].tolist())
+    volts = given.lines[0].tolist()
+    return (
+        all(LEAST_RAY < ray < MOST_VOLTS for ray in rays.tolist())
+        and not any(value > MOST_AMPERES * wiring.rated_current for value in amperes)
+        and not any(value > MOST_VOLTS * wiring.nominal_voltage for value in volts)
     )
 
 
@@ -276,7 +277,7 @@ def _tracked(judge: Judge, state: CircuitState, given: CircuitSample, at: float)
         ]
     )
     is_steady = len(state.last) == len(now) and float(np.abs(now - state.last).max()) < STEADY
-    state = replace(state, last=now)
+    state = state._replace(last=now)
     is_new = len(state.tracked) != len(now) or float(np.abs(now - state.tracked).max()) > TRACKED_STEP
     is_due = at - state.tracked_at >= TRACKED_EVERY_S
     if not (judge.is_learned and is_steady and is_new and is_due) or state.tracking is None:
@@ -286,7 +287,7 @@ def _tracked(judge: Judge, state: CircuitState, given: CircuitSample, at: float)
         return state
     elapsed = min(at - state.tracked_at, 30.0 * 86400.0) if math.isfinite(state.tracked_at) else 0.0
     after = track(state.tracking, judge.plan.wiring, judge.expected, given, judge.circuit, elapsed=elapsed)
-    return replace(state, tracking=after, tracked_at=at, tracked=now)
+    return state._replace(tracking=after, tracked_at=at, tracked=now)
 
 
 # --------------------------------------------------------------------------
@@ -321,8 +322,7 @@ def _with_angles(judge: Judge, found: Found, recovery: Recovery, best: int) -> F
     order = judge.plan.order
     voltages = {_pair(order[index], order[(index + 1) % 3]): values[f"line_{index}"] for index in range(3)}
     zero = values["zero"] if judge.plan.wiring.tied else MISSING
-    return replace(
-        found,
+    return found._replace(
         is_recovered=True,
         voltages=voltages,
         components=(zero, values["positive"], values["negative"]),
@@ -403,8 +403,7 @@ def _with_usual(judge: Judge, found: Found, given: CircuitSample) -> Found:
     gains = {leg: float(judge.circuit.parameters[start + place]) for place, leg in enumerate(wiring.rays)}
     off = [float(given.rays[0, leg]) * (1.0 - gains[leg]) / usual[order[leg]] - 1.0 for leg in generated]
     components = np.abs(sequence_components(potentials))
-    return replace(
-        found,
+    return found._replace(
         usual={judge.plan.rays[leg]: usual[order[leg]] for leg in generated},
         usual_factor=float(components[2] / components[1]),
         off_normal=max(off, key=abs),

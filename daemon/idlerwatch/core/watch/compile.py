@@ -38,6 +38,7 @@ def compile_plan(settings: Settings) -> Plan:
         cycle_s=settings.site.cycle_s,
         feed=feed,
         fed_pair=str(feed.pair),
+        generated=feed.generated_legs,
         nominal={str(pair): feed.nominal_voltage(pair) for pair in (*LINE_PAIRS, *NEUTRAL_PAIRS)},
         points=feed.nominal_points(),
         frequency=settings.supply.frequency,

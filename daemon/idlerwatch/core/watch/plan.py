@@ -125,6 +125,7 @@ class Plan:
     cycle_s: float
     feed: Feed
     fed_pair: str
+    generated: tuple[Leg, ...]
     nominal: Mapping[str, float]
     points: Mapping[Conductor, complex]
     frequency: float
