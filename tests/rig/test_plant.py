@@ -217,3 +217,17 @@ def test_many_converters_at_once_equal_each_alone_and_a_seed_repeats_itself():
     first.start().go(4.0)
     assert first.state.nodes == pytest.approx(many.state.nodes[:1], abs=1e-6)
     assert not math.isclose(many.state.flux[0], many.state.flux[1])
+
+
+def test_an_idler_on_a_high_supply_runs_steadily():
+    """At 254 V its speed answers in less than half a step; an idler that idles takes power and never gives any."""
+    run = Run().fault(supply_ratio=np.array([1.05])).start()
+    run.until(Phase.RUNNING)
+    run.go(1.0)
+    speeds, powers = [], []
+    for _ in range(20):
+        run.go(STEP_S)
+        speeds.append(run.state.speed[0])
+        powers.append(look(run.plant, run.state, run.solution).source_power[0].real)
+    assert np.ptp(speeds) < 1e-6
+    assert min(powers) > 0.0
