@@ -16,8 +16,8 @@ from idlerwatch.core.converter.circuit import Floats, Positions, Wiring
 
 PART: Final = 0.5
 """Share of the time a chattering bank is in, on the mean."""
-PART_SPREAD: Final = 0.12
-"""Standard deviation of that share: wholly in or out is four of them away."""
+PART_SPREAD: Final = 0.1
+"""Standard deviation of that share: wholly in or out is five of them away."""
 Row = tuple[Floats, Floats, Floats, Floats]
 _SAME: Final = 1e-9
 _UNLIKELY: Final = 0.3

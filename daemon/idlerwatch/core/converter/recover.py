@@ -105,8 +105,8 @@ class Recoverer:
         self.wiring, self.positions, self.circuit = wiring, positions, circuit
         self._hypotheses = len(positions.mirrored)
         self._total = circuit.covariance + np.diag(circuit.noise**2)
-        self._nominal = np.array([wiring.directions[leg] for leg in wiring.free])
-        self._prior = np.eye(len(self._nominal)) / ANGLE_PRIOR**2
+        self._nominal = nominal_angles(wiring, positions)
+        self._prior = np.eye(len(wiring.free)) / ANGLE_PRIOR**2
         self._balances: dict[int, Balance] = {}
 
     def recover(self, sample: Sample) -> Recovery:
@@ -145,42 +145,43 @@ class Recoverer:
         flat = take(sample, np.repeat(np.arange(count), self._hypotheses))
         seen = self._balance(count).seen(flat)
         diagonal = self.circuit.discrepancy**2 + row_spreads(self.wiring, flat) ** 2
-        angles = np.broadcast_to(self._nominal, (len(flat.rays), len(self._nominal)))
-        point = seen.at(angles)
+        nominal = np.tile(self._nominal, (count, 1))
+        turned = np.zeros_like(nominal)
+        point = seen.at(nominal)
         for _ in range(NEARING):
             by_angle = point.by_angle()
-            angles, _ = self._step(by_angle, by_angle / diagonal[:, None, :], point.residuals(), angles)
-            point = seen.at(angles)
+            turned, _ = self._step(by_angle, by_angle / diagonal[:, None, :], point.residuals(), turned)
+            point = seen.at(nominal + turned)
         by_parameter = point.by_parameter()
         spread = _row_covariance(by_parameter, self._total, point, diagonal * point.strain()[:, None] ** 2)
         weights = np.asarray(np.linalg.inv(spread), dtype=np.float64)
         for _ in range(SETTLING):
             by_angle = point.by_angle()
             weighted = by_angle @ weights
-            angles, covariance = self._step(by_angle, weighted, point.residuals(), angles)
-            point = seen.at(angles)
-        judged = self._judged(point, angles, spread=spread, weights=weights, by_angle=by_angle, covariance=covariance)
+            turned, covariance = self._step(by_angle, weighted, point.residuals(), turned)
+            point = seen.at(nominal + turned)
+        judged = self._judged(point, turned, spread=spread, weights=weights, by_angle=by_angle, covariance=covariance)
         best = judged["log_likelihood"].reshape(count, -1).argmax(axis=1)
         at = best + np.arange(count) * self._hypotheses
         quantities, standards = self._quantities(point.potentials[at], by_parameter[at], covariance[at] @ weighted[at])
-        found = {"potentials": point.potentials, "angles": angles, "angle_covariance": covariance, **judged}
+        found = {"potentials": point.potentials, "angles": nominal + turned, "angle_covariance": covariance, **judged}
         shaped = {name: flat.reshape(count, self._hypotheses, *flat.shape[1:]) for name, flat in found.items()}
         return shaped | {"likeliest": best, "quantities": quantities, "standards": standards}
 
-    def _step(self, by_angle: Floats, weighted: Floats, residuals: Floats, angles: Floats) -> tuple[Floats, Floats]:
-        """Return the angles one Gauss-Newton step on, and the inverse of the normal matrix."""
+    def _step(self, by_angle: Floats, weighted: Floats, residuals: Floats, turned: Floats) -> tuple[Floats, Floats]:
+        """Return the turns from nominal one Gauss-Newton step on, and the inverse of the normal matrix."""
         normal = weighted @ by_angle.swapaxes(-1, -2) + self._prior
-        pull = (weighted @ residuals[..., None])[..., 0] + (angles - self._nominal) / ANGLE_PRIOR**2
+        pull = (weighted @ residuals[..., None])[..., 0] + turned / ANGLE_PRIOR**2
         inverse = _inverse(normal)
-        return angles - (inverse @ pull[..., None])[..., 0], inverse
+        return turned - (inverse @ pull[..., None])[..., 0], inverse
 
     def _judged(
-        self, point: Point, angles: Floats, *, spread: Floats, weights: Floats, by_angle: Floats, covariance: Floats
+        self, point: Point, turned: Floats, *, spread: Floats, weights: Floats, by_angle: Floats, covariance: Floats
     ) -> dict[str, Floats]:
         """Return how well the circuit holds at the angles found."""
         residuals = point.residuals()
         chi_square = (residuals * (weights @ residuals[..., None])[..., 0]).sum(axis=-1)
-        chi_square += ((angles - self._nominal) ** 2).sum(axis=-1) / ANGLE_PRIOR**2
+        chi_square += (turned**2).sum(axis=-1) / ANGLE_PRIOR**2
         scale = -np.log(np.linalg.det(weights) * _determinant(covariance))
         left = np.einsum("bii->bi", spread) - ((covariance @ by_angle) * by_angle).sum(axis=-2)
         return {
@@ -204,6 +205,16 @@ class Recoverer:
         sensitivity, through, sizes = (_with_factor(part, sizes) for part in (sensitivity, through, sizes))
         variance = ((sensitivity @ self._total) * sensitivity).sum(axis=-1) + through**2 @ self.circuit.discrepancy**2
         return sizes, np.sqrt(variance)
+
+
+def nominal_angles(wiring: Wiring, positions: Positions) -> Floats:
+    """Return where the free legs stand nominally under each position: (h, free). [rad]
+
+    An idler that runs the other way round makes the mirror image, about the fed pair.
+    """
+    ahead = np.array([wiring.directions[leg] for leg in wiring.free])
+    fixed = next(leg for leg in wiring.rays if leg not in wiring.free)
+    return np.where(positions.mirrored[:, None], 2.0 * wiring.directions[fixed] - ahead, ahead)
 
 
 def take(sample: Sample, rows: object) -> Sample:
