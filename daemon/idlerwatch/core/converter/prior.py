@@ -31,6 +31,8 @@ BRAKING: Final = (0.45, 0.15)
 """Rotor's share of the negative-sequence conductance: its loss is what the positive sequence must carry."""
 LEAST_RELATIVE: Final = 0.15
 """No admittance is known better than this from a plate."""
+LEAST: Final = 1e-3
+"""Nor better than this, over the base admittance: a floating star's Y0 is nought and means nothing."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -83,7 +85,7 @@ def _idler(wiring: Wiring, plates: Sequence[Nameplate]) -> tuple[Floats, Floats]
             moved = _moved(machine, name, 1.0 + relative)
             if moved is not None:
                 variance += (others + _parts(moved, wiring) - middle) ** 2
-    admittances = np.maximum(np.sqrt(variance), LEAST_RELATIVE * np.abs(middle))
+    admittances = np.maximum(np.sqrt(variance), LEAST_RELATIVE * np.abs(middle) + LEAST)
     asymmetry = WINDING_SPREAD / math.sqrt(3.0)
     means = [*middle, *(mean for mean, _ in BENDING.values()), FRICTION[0], BRAKING[0], 0.0, 0.0]
     standards = [*admittances, *(wide for _, wide in BENDING.values()), FRICTION[1], BRAKING[1], asymmetry, asymmetry]

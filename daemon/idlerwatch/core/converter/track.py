@@ -25,6 +25,8 @@ PRIOR: Final = 0.1
 WANDERS: Final = 0.02
 """Standard deviation by which a capacitor may change in thirty days."""
 MONTH_S: Final = 30.0 * 86400.0
+DOUBT: Final = 2.0
+"""A single sample's meters look at slightly different instants: the discrepancy counts so much more."""
 SEPARABLE: Final = 0.06
 """A capacitor known no better than this, of its capacitance, is not separable from others."""
 
@@ -110,7 +112,7 @@ def _innovation(
     parameters[start : start + len(wiring.cans)] += change
     seen = Balance(wiring, positions, np.zeros(1, dtype=np.int64), parameters).seen(sample)
     nominal = np.array([[wiring.directions[leg] for leg in wiring.free]])
-    diagonal = circuit.discrepancy**2 + row_spreads(wiring, sample)[0] ** 2
+    diagonal = (DOUBT * circuit.discrepancy) ** 2 + row_spreads(wiring, sample)[0] ** 2
     angles = nominal
     for _ in range(4):
         point = seen.at(angles)
