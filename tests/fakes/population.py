@@ -36,8 +36,8 @@ FEEDS = {
     "split-phase": Feed(Pair("L1", "L2"), 240.0, neutral="centre-tap"),
     "line": Feed(Pair("L1", "L2"), 400.0, neutral="none"),
 }
-SETTLING_STEPS = 60
-REGULATED_STEPS = 45
+SETTLING_STEPS = 40
+REGULATED_STEPS = 30
 SUPPLY = (216.0 / 230.0, 253.0 / 230.0)
 """Between which the supply stands where it enters the converter, over the declared voltage."""
 MEANT = 10
