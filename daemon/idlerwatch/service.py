@@ -37,9 +37,11 @@ from idlerwatch.core.values import (
     Trouble,
     WindowRow,
 )
+from idlerwatch.core.watch.circuit import NOT_LEARNED
 from idlerwatch.core.watch.watch import Watch
 from idlerwatch.edges import board, systemd
 from idlerwatch.edges.bus import BusThread
+from idlerwatch.edges.circuit_file import in_force
 from idlerwatch.edges.clock import Clock, ClockWait, is_synchronised
 from idlerwatch.edges.influx import Influx
 from idlerwatch.edges.journal import Cursor, Journal, JournalReader, Keep
@@ -321,8 +323,11 @@ class Service:
     def _remember(self, parts: Parts) -> Watch:
         """Return a core that was fed the journal's last minutes, and knows the alarms that stood."""
         reader = JournalReader(parts.journal.path)
+        known, sentence = in_force(parts.journal.path)
+        if sentence:
+            log.log(logging.INFO if sentence == NOT_LEARNED else logging.WARNING, "%s", sentence)
         try:
-            watch = Watch.begin(parts.settings)
+            watch = Watch.begin(parts.settings, known=known, remark=sentence)
             for item in self._clock.rebase(reader.recent(REMEMBERED_S), REMEMBERED_S):
                 watch, _ = watch.take(item)
             return watch.with_standing(reader.standing())

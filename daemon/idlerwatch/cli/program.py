@@ -18,6 +18,7 @@ COMMANDS: Final = {
     "demo": "watch a virtual converter through a bad day",
     "check": "read the settings and say what this installation can and cannot see",
     "assess": "assess readings given by hand or in a CSV file",
+    "circuit": "learn the converter's circuit from what was recorded, and accept it as the normal",
     "alarms": "list the alarms in force, and which are not available",
     "replay": "feed recorded cycles to the core again and print what it would have said",
 }

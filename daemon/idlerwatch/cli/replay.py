@@ -7,9 +7,11 @@ from pathlib import Path
 import click
 from rich.progress import Progress
 
+from idlerwatch.core.converter.known import KnownCircuit
 from idlerwatch.core.settings.model import Settings
 from idlerwatch.core.values import AlarmEvent, Assessment, Input
 from idlerwatch.core.watch.watch import Watch
+from idlerwatch.edges.circuit_file import in_force
 from idlerwatch.edges.console import message_line, status_line
 from idlerwatch.edges.files import load_settings
 from idlerwatch.edges.journal import JournalReader
@@ -47,7 +49,7 @@ def command(
     samples = 0
     with Progress(transient=True) as progress:
         task = progress.add_task("replaying", total=None)
-        for samples, line in tell(settings, given, every_s):
+        for samples, line in tell(settings, given, every_s, in_force(where)[0]):
             progress.update(task, description=f"replaying: {samples} samples")
             progress.console.print(line, soft_wrap=True, highlight=False, markup=False)
     reader.close()
@@ -58,9 +60,11 @@ def _utc(moment: dt.datetime | None, otherwise: float) -> float:
     return otherwise if moment is None else moment.astimezone().timestamp()
 
 
-def tell(settings: Settings, given: Iterator[Input], every_s: float) -> Iterator[tuple[int, str]]:
+def tell(
+    settings: Settings, given: Iterator[Input], every_s: float, known: KnownCircuit | None = None
+) -> Iterator[tuple[int, str]]:
     """Yield how many samples there were so far, and a line: each message, and the state now and then."""
-    watch = Watch.begin(settings)
+    watch = Watch.begin(settings, known=known)
     samples, due, offset, last = 0, -float("inf"), 0.0, ""
     for item in given:
         watch, outputs = watch.take(item)

@@ -122,6 +122,7 @@ class Found(NamedTuple):
 
 
 NOTHING: Final = Found()
+NOT_LEARNED: Final = "no circuit was learned and accepted yet: the plate's values serve, with wide uncertainty"
 
 
 # --------------------------------------------------------------------------
@@ -129,12 +130,17 @@ NOTHING: Final = Found()
 # --------------------------------------------------------------------------
 
 
-def compile_judge(settings: Settings, plan: Plan, known: KnownCircuit | None) -> Judge | None:
-    """Return what judges this converter; None where its meters do not show it as a circuit."""
+def compile_judge(
+    settings: Settings, plan: Plan, known: KnownCircuit | None, remark: str = NOT_LEARNED
+) -> Judge | None:
+    """Return what judges this converter; None where its meters do not show it as a circuit.
+
+    `remark` says why there is no learned circuit; one that does not belong here is refused with its own sentence.
+    """
     own = circuit_plan(settings, plan)
     if own is None:
         return None
-    remark = "" if known is None else refusal(own, known)
+    remark = remark if known is None else refusal(own, known)
     is_learned = known is not None and not remark
     parameters, covariance = own.prior.mean, np.diag(own.prior.standard**2)
     if known is not None and is_learned:
@@ -236,7 +242,7 @@ def judge_circuit(
     if life.since != state.running_since:
         state = state._replace(belief=begin_belief(len(judge.weights)), running_since=life.since)
     given = circuit_sample(judge.plan, sample, derived)
-    if not _is_sound(judge.plan, given) or not derived.generated >= LEAST_HEIGHT or life.loading == "machine starting":
+    if not is_sound(judge.plan, given) or not derived.generated >= LEAST_HEIGHT or life.loading == "machine starting":
         return state, NOTHING._replace(remarks=_always(judge))
     recovery = judge.recoverer.recover(given)
     evidence = recovery.log_likelihood[0] + _told_by_contacts(judge, derived)
@@ -245,7 +251,7 @@ def judge_circuit(
     return state, _found(judge, state, given, recovery)
 
 
-def _is_sound(own: CircuitPlan, given: CircuitSample) -> bool:
+def is_sound(own: CircuitPlan, given: CircuitSample) -> bool:
     """Return whether a sample can be a running converter's: every voltage and current there, none absurd."""
     wiring = own.wiring
     rays = given.rays[0, list(wiring.rays)] / wiring.nominal_voltage
@@ -439,11 +445,7 @@ BELIEVED_MISFIT: Final = 4.0
 
 
 def _always(judge: Judge) -> tuple[str, ...]:
-    if judge.remark:
-        return (judge.remark,)
-    if not judge.is_learned:
-        return ("the converter's circuit was not learned: its plate's values serve, with wide uncertainty",)
-    return ()
+    return (judge.remark,) if judge.remark else ()
 
 
 def _misfits(judge: Judge, recovery: Recovery, best: int) -> tuple[str, ...]:

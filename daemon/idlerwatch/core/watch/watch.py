@@ -31,6 +31,7 @@ from idlerwatch.core.watch.alarms import AlarmsState, begin_alarms, judge_alarms
 from idlerwatch.core.watch.align import AlignState, begin_align, step
 from idlerwatch.core.watch.assess import assess
 from idlerwatch.core.watch.circuit import (
+    NOT_LEARNED,
     CircuitState,
     Judge,
     begin_circuit,
@@ -64,7 +65,10 @@ class Watch:
 
     @staticmethod
     def begin(
-        settings: Settings, standing: tuple[StandingAlarm, ...] = (), known: KnownCircuit | None = None
+        settings: Settings,
+        standing: tuple[StandingAlarm, ...] = (),
+        known: KnownCircuit | None = None,
+        remark: str = NOT_LEARNED,
     ) -> "Watch":
         """Return the watch before the first input.
 
@@ -76,9 +80,11 @@ class Watch:
             The alarms that stood at the end of the last run.
         known
             The circuit that was learned and accepted; None where the plate's values must serve.
+        remark
+            Why it is None, in a sentence.
         """
         plan = compile_plan(settings)
-        judge = compile_judge(settings, plan, known)
+        judge = compile_judge(settings, plan, known, remark)
         return Watch(
             plan=plan,
             judge=judge,
