@@ -32,8 +32,8 @@ def test_example_is_without_fault_and_fits_eighty_columns_in_a_pipe():
     assert "\x1b" not in result.output
 
 
-def test_angles_that_are_not_seen_are_told():
-    assert "Angles between the legs are not seen" in words(run(EXAMPLE))
+def test_angles_that_are_recovered_and_not_measured_are_told():
+    assert "Angles between the legs are not measured; they are recovered" in words(run(EXAMPLE))
 
 
 def test_every_fault_is_a_line_and_the_exit_code_is_2(tmp_path):

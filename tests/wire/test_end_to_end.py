@@ -137,3 +137,14 @@ def journal_says(folder, tag, state):
         return any(alarm.tag == tag and alarm.state == state for alarm in alarms)
 
     wait_until(has, 30.0, f"{tag} {state} in the journal")
+
+
+def test_a_damaged_circuit_is_said_in_one_sentence_and_the_daemon_runs(tmp_path, meters, broker):
+    folder = tmp_path / "journal" / "circuit"
+    folder.mkdir(parents=True)
+    (folder / "20261130T100000Z.toml").write_text("version = 1\nlearned_at = 7\n")
+    with phone(broker.port) as listening, daemon(tmp_path, shed(tmp_path, meters.port, broker.port)) as running:
+        wait_until(lambda: listening.json("assessment").get("loading") == "loaded", 20.0, "a loaded converter")
+        remarks = " ".join(listening.json("assessment")["remarks"])
+        assert "20261130T100000Z.toml: learned_at is 7, must be a text; the plate's values serve" in remarks
+        assert running.stop() == 0

@@ -13,6 +13,8 @@ from idlerwatch.core.conductors import LEGS, NEUTRAL_PAIRS, Pair
 from idlerwatch.core.converter.placing import NUMBER, find_order
 from idlerwatch.core.polling import LineTiming, MeterPlan, plan_meter, plan_time_s
 from idlerwatch.core.settings.model import Bus, Meter, Settings
+from idlerwatch.core.watch.compile import compile_plan
+from idlerwatch.core.watch.wiring import lacks
 
 BUSIEST: Final = 0.9
 """Of the cycle; what is left serves retries and a silent meter."""
@@ -44,6 +46,12 @@ def wiring_level(settings: Settings) -> str:
 def _unbalance(settings: Settings) -> Iterator[str]:
     if _sees_lines(settings):
         yield "Unbalance is measured: the voltages across the legs make a rigid figure."
+    elif not lacks(settings, compile_plan(settings)):
+        yield (
+            "Angles between the legs are not measured; they are recovered from the converter's own circuit. Until "
+            "that is learned and accepted (idlerwatch circuit) the idler's plate serves, and the unbalance is known "
+            "to a point or so; line voltages measured would show it directly."
+        )
     elif set(NEUTRAL_PAIRS) & set(_pairs(settings)):
         yield (
             "Angles between the legs are not seen: leg-to-neutral voltages can look even while the lines "
