@@ -461,10 +461,7 @@ def prior_for(population: Population, wiring: Wiring, index: int = 0) -> Prior:
         lines=[voltmeter] * len(wiring.lines),
     )
     plate = Nameplate(float(population.kilowatts[index]), population.plant.feed.line_voltage)
-    prior = prior_of(wiring, [plate], limits)
-    return Prior(
-        prior.mean, np.where(prior.standard > 0.0, prior.standard, 1.0)
-    )  # Y0 of a star that floats: of no effect
+    return prior_of(wiring, [plate], limits)
 
 
 def discrepancy_of(wiring: Wiring, share: float = DISCREPANCY):

@@ -47,8 +47,7 @@ def plate_prior(wiring):
     """What a plate of 7.5 kW, meters of class 0.5 and marking say."""
     line = round(wiring.nominal_voltage * SQUARE_ROOT_OF_THREE)
     limits = Limits([0.0005 * SQUARE_ROOT_OF_THREE] * len(wiring.rays), [0.01] * len(wiring.channels))
-    prior = prior_of(wiring, [Nameplate(7.5, line)], limits)
-    return Prior(prior.mean, np.where(prior.standard > 0.0, prior.standard, 1.0))
+    return prior_of(wiring, [Nameplate(7.5, line)], limits)
 
 
 def world(wiring, parameters, states=12, seed=3):
