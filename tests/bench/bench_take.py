@@ -2,17 +2,21 @@
 
     python tests/bench/bench_take.py
 
-Prints a row an installation: the whole cycle (all readings and its end), and the end alone. The budget is one
-millisecond at each end of a cycle, everything included; the time of a fixed piece of arithmetic stands beside it, so
-that figures of different machines can be compared.
+Prints a row an installation: the whole cycle (all readings and its end), and the end alone. The budget is 2.5
+milliseconds at each end of a cycle, everything included, a learned circuit with all its hypotheses too; the time of a
+fixed piece of arithmetic stands beside it, so that figures of different machines can be compared.
 """
 
+import os
 import random
 import statistics
 import sys
 import time
 from pathlib import Path
 
+import numpy as np
+
+os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")  # as the unit has it
 sys.path.insert(0, str(Path(__file__).resolve().parents[1]))
 
 from fakes.sheds import (  # the tests' path is set above
@@ -25,11 +29,14 @@ from fakes.sheds import (  # the tests' path is set above
     split_running,
     supply_says,
 )
+from idlerwatch.core.converter.known import KnownCircuit
 from idlerwatch.core.values import CycleEnd
+from idlerwatch.core.watch.compile import compile_plan
 from idlerwatch.core.watch.watch import Watch
+from idlerwatch.core.watch.wiring import circuit_plan
 from idlerwatch.edges.files import config_directory, load_settings
 
-BUDGET_S = 1e-3
+BUDGET_S = 2.5e-3
 CYCLES = 3000
 
 
@@ -75,10 +82,22 @@ def shaken(meters, chance):
     }
 
 
+def known(settings):
+    """The plate's values as if they had been learned: what a learned circuit adds to a cycle is then in it."""
+    own = circuit_plan(settings, compile_plan(settings))
+    if own is None:
+        return None
+    covariance = np.diag(own.prior.standard**2) / 25.0
+    return KnownCircuit(
+        own.wiring.names, own.prior.mean, covariance, "", own.converter, own.arrangement, 12, 120, 216.0, 253.0, 0.4,
+        1.0, has_converged=True,
+    )  # fmt: skip
+
+
 def run(settings, meters):
     chance = random.Random(7)
     streams = [list(cycle(float(at), shaken(meters, chance))) for at in range(CYCLES)]
-    watch, ends, wholes = Watch.begin(settings), [], []
+    watch, ends, wholes = Watch.begin(settings, known=known(settings)), [], []
     for stream in streams:
         whole = 0.0
         for event in stream:
@@ -114,7 +133,7 @@ def main():
         ]
         worst = max(worst, statistics.median(ends))
         print(f"{name:30} {figures[0]:9.3f} ms {figures[1]:9.3f} ms {figures[2]:11.3f} ms {figures[3]:9.3f} ms")
-    print(f"median over budget of {BUDGET_S * 1e3:.0f} ms: {worst / BUDGET_S:.2f}")
+    print(f"median over budget of {BUDGET_S * 1e3:.1f} ms: {worst / BUDGET_S:.2f}")
     return 0 if worst <= BUDGET_S else 1
 
 

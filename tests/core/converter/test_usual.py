@@ -10,7 +10,7 @@ from idlerwatch.core.converter.hypotheses import catalogue
 from idlerwatch.core.converter.nameplate import Nameplate, typical_machine
 from idlerwatch.core.converter.prior import Limits, prior_of
 from idlerwatch.core.converter.recover import Circuit, Recoverer
-from idlerwatch.core.converter.usual import usual_potentials
+from idlerwatch.core.converter.usual import UsualLegs
 
 TURN = 2.0 * np.pi / 3.0
 WIRING = Wiring(
@@ -26,6 +26,7 @@ WIRING = Wiring(
 )
 PARAMETERS = prior_of(WIRING, [Nameplate(7.5, 400.0)], Limits([0.005] * 3, [0.01] * 2)).mean
 CLOSED = nominal_positions(WIRING)
+USUAL = UsualLegs(WIRING, CLOSED, PARAMETERS)
 
 
 def balanced(positions, currents):
@@ -33,7 +34,7 @@ def balanced(positions, currents):
     begin = np.array([[235.0, 228.0, 228.0]] * len(currents))
     blank = np.zeros((len(currents), 0))
     sample = Sample(begin, currents, np.zeros((len(currents), 2, 2)), blank, blank)
-    potentials = usual_potentials(WIRING, positions, sample, PARAMETERS)
+    potentials = UsualLegs(WIRING, positions, PARAMETERS).potentials(sample)
     return replace(sample, rays=np.abs(potentials)), potentials
 
 
@@ -55,7 +56,7 @@ def test_with_the_bank_out_the_usual_voltages_are_those_with_it_in():
     opened = type(ways)(*(getattr(ways, name)[1:2] for name in ways.__slots__))
     out, _ = balanced(opened, CURRENTS)
     closed, potentials = balanced(CLOSED, CURRENTS)
-    again = usual_potentials(WIRING, CLOSED, out, PARAMETERS)
+    again = USUAL.potentials(out)
     assert again == pytest.approx(potentials, abs=1e-3)
     assert (out.rays[:, 1:] < 0.97 * closed.rays[:, 1:]).all()
 
@@ -63,11 +64,11 @@ def test_with_the_bank_out_the_usual_voltages_are_those_with_it_in():
 def test_what_no_circuit_could_carry_has_no_usual_voltage():
     absurd = np.array([[900.0 + 0j, 900.0 + 0j]])
     sample = Sample(np.array([[230.0, 230.0, 230.0]]), absurd, np.zeros((1, 2, 2)), np.zeros((1, 0)), np.zeros((1, 0)))
-    assert np.isnan(usual_potentials(WIRING, CLOSED, sample, PARAMETERS)).all()
+    assert np.isnan(USUAL.potentials(sample)).all()
 
 
 def test_many_at_once_equal_each_alone():
     sample, potentials = balanced(CLOSED, CURRENTS)
     for row in range(len(CURRENTS)):
         one = Sample(*(getattr(sample, name)[row : row + 1] for name in Sample.__slots__))
-        assert usual_potentials(WIRING, CLOSED, one, PARAMETERS)[0] == pytest.approx(potentials[row], abs=1e-6)
+        assert USUAL.potentials(one)[0] == pytest.approx(potentials[row], abs=1e-6)

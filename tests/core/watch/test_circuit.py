@@ -59,7 +59,7 @@ def test_plate_values_recover_the_unbalance_with_an_honestly_wide_uncertainty():
     assert told.known == "recovered"
     assert abs(told.value - true_factor(shed)) < told.uncertainty
     assert 0.004 < told.uncertainty < 0.05
-    assert "was not learned" in " ".join(found.remarks)
+    assert "no circuit was learned and accepted yet" in " ".join(found.remarks)
     assert not figure(found, "converter", "converter", "off_normal").is_known
 
 

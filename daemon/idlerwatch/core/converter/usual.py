@@ -9,59 +9,76 @@ from dataclasses import replace
 from typing import Final
 
 import numpy as np
-from numpy.typing import NDArray
 
 from idlerwatch.core.converter.balance import Balance
 from idlerwatch.core.converter.circuit import Complexes, Floats, Positions, Sample, Wiring
 
-ITERATIONS: Final = 6
+LONGEST_SEARCH: Final = 8
 FARTHEST: Final = 0.3
 """Longest step in angle and logarithm of magnitude."""
-SETTLED: Final = 1e-5
-"""A solution that still moves by more is none."""
+NEAR: Final = 1e-4
+"""After a step this short the next one would be its square."""
 
 
-def usual_potentials(wiring: Wiring, positions: Positions, sample: Sample, parameters: Floats) -> Complexes:
-    """Return the potentials of the legs to the hub that the expected circuit would have at these currents.
+class UsualLegs:
+    """The circuit in the position expected of it, ready for any number of samples.
 
     Parameters
     ----------
     positions
         One: the position expected.
-    sample
-        n samples; the rays of the generated legs only begin the search.
     parameters : (p,)
-
-    Returns
-    -------
-    (n, 3)
-        NaN where there is none: the circuit could not carry such currents. [V]
     """
-    generated = [channel.leg for channel in wiring.generated]
-    count = len(sample.rays)
-    balance = Balance(wiring, positions, np.zeros(count, dtype=np.int64), parameters)
-    angles = np.tile([wiring.directions[leg] for leg in wiring.free], (count, 1))
-    rays, step = sample.rays, np.zeros((count, 2 * len(generated)))
-    for _ in range(ITERATIONS):
-        step = _step(balance, replace(sample, rays=rays), angles, generated)
-        angles = angles + step[:, : len(generated)]
-        rays = rays.copy()
-        rays[:, generated] *= np.exp(step[:, len(generated) :])
-    potentials = balance.seen(replace(sample, rays=rays)).at(angles).potentials
-    potentials[np.abs(step).max(axis=1) > SETTLED] = np.nan
-    return potentials
 
+    def __init__(self, wiring: Wiring, positions: Positions, parameters: Floats) -> None:
+        self._wiring, self._positions, self._parameters = wiring, positions, parameters
+        self._generated = [channel.leg for channel in wiring.generated]
+        self._places = [wiring.rays.index(leg) for leg in self._generated]
+        self._balances: dict[int, Balance] = {}
 
-def _step(balance: Balance, sample: Sample, angles: Floats, generated: list[int]) -> Floats:
-    """Return Newton's step of angles and logarithms of magnitudes: (n, 2g)."""
-    wiring = balance.wiring
-    point = balance.seen(sample).at(angles)
-    rows = 2 * len(generated)
-    places = [wiring.rays.index(leg) for leg in generated]
-    by_size = -point.by_ray()[:, places, :rows] * balance.kept[generated][None, :, None]
-    slopes = np.concatenate([point.by_angle()[:, :, :rows], by_size], axis=1).swapaxes(1, 2)
-    return _bounded(np.linalg.solve(slopes, -point.residuals()[:, :rows, None])[..., 0])
+    def potentials(self, sample: Sample, angles: Floats | None = None) -> Complexes:
+        """Return the potentials of the legs to the hub that the expected circuit would have at these currents.
 
+        Parameters
+        ----------
+        sample
+            n samples; the rays of the generated legs only begin the search.
+        angles : (n, free)
+            Where the search begins; nominal ones without. [rad]
 
-def _bounded(step: NDArray[np.floating]) -> Floats:
-    return np.clip(np.asarray(step, dtype=np.float64), -FARTHEST, FARTHEST)
+        Returns
+        -------
+        (n, 3)
+            NaN where there is none: the circuit could not carry such currents. [V]
+        """
+        wiring, generated = self._wiring, self._generated
+        count = len(sample.rays)
+        if angles is None:
+            angles = np.tile([wiring.directions[leg] for leg in wiring.free], (count, 1))
+        rays, balance = sample.rays.copy(), self._balance(count)
+        step = np.full((count, 1), np.inf)
+        for _ in range(LONGEST_SEARCH):
+            step = self._step(balance, replace(sample, rays=rays), angles)
+            angles = angles + step[:, : len(generated)]
+            rays[:, generated] *= np.exp(step[:, len(generated) :])
+            if np.abs(step).max() < NEAR:
+                break
+        potentials = balance.seen(replace(sample, rays=rays)).at(angles).potentials
+        potentials[np.abs(step).max(axis=1) >= NEAR] = np.nan
+        return potentials
+
+    def _balance(self, count: int) -> Balance:
+        found = self._balances.get(count)
+        if found is None:
+            which = np.zeros(count, dtype=np.int64)
+            found = self._balances[count] = Balance(self._wiring, self._positions, which, self._parameters)
+        return found
+
+    def _step(self, balance: Balance, sample: Sample, angles: Floats) -> Floats:
+        """Return Newton's step of angles and logarithms of magnitudes: (n, 2g)."""
+        point = balance.seen(sample).at(angles)
+        rows = 2 * len(self._generated)
+        by_size = -point.by_ray()[:, self._places, :rows] * balance.kept[self._generated][None, :, None]
+        slopes = np.concatenate([point.by_angle()[:, :, :rows], by_size], axis=1).swapaxes(1, 2)
+        step = np.linalg.solve(slopes, -point.residuals()[:, :rows, None])[..., 0]
+        return np.asarray(np.clip(step, -FARTHEST, FARTHEST), dtype=np.float64)

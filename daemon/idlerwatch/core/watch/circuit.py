@@ -30,7 +30,7 @@ from idlerwatch.core.converter.hypotheses import PART, Catalogue, Hypothesis, ca
 from idlerwatch.core.converter.known import KnownCircuit
 from idlerwatch.core.converter.recover import QUANTITIES, Circuit, Recoverer, Recovery
 from idlerwatch.core.converter.track import SEPARABLE, Tracking, begin_tracking, track
-from idlerwatch.core.converter.usual import usual_potentials
+from idlerwatch.core.converter.usual import UsualLegs
 from idlerwatch.core.electrical.sequence import sequence_components
 from idlerwatch.core.settings.model import Settings
 from idlerwatch.core.values import Sample
@@ -75,6 +75,7 @@ class Judge:
     catalogue: Catalogue
     recoverer: Recoverer
     expected: Positions
+    usual: UsualLegs
     contacts: Mapping[str, Floats]
     weights: Floats
     remark: str = ""
@@ -155,6 +156,7 @@ def compile_judge(
         catalogue=ways,
         recoverer=Recoverer(own.wiring, ways.positions, circuit),
         expected=first,
+        usual=UsualLegs(own.wiring, first, circuit.parameters),
         contacts=_contacts(settings, own, ways),
         weights=ways.weights,
         remark=remark,
@@ -316,7 +318,7 @@ def _found(judge: Judge, state: CircuitState, given: CircuitSample, recovery: Re
     )
     if is_recovered:
         found = _with_angles(judge, found, recovery, best)
-    return _with_usual(judge, found, given) if judge.is_learned else found
+    return _with_usual(judge, found, given, recovery.angles[:, 0]) if judge.is_learned else found
 
 
 def _with_angles(judge: Judge, found: Found, recovery: Recovery, best: int) -> Found:
@@ -399,10 +401,10 @@ def _ratios(judge: Judge, state: CircuitState) -> Mapping[str, Measured]:
     return told
 
 
-def _with_usual(judge: Judge, found: Found, given: CircuitSample) -> Found:
+def _with_usual(judge: Judge, found: Found, given: CircuitSample, angles: Floats) -> Found:
     """Return with what the generated legs would read in the expected position at this load."""
     wiring, order = judge.plan.wiring, judge.plan.order
-    potentials = usual_potentials(wiring, judge.expected, given, judge.circuit.parameters)[0]
+    potentials = judge.usual.potentials(given, angles)[0]
     generated = [channel.leg for channel in wiring.generated]
     usual = {order[leg]: float(abs(potentials[leg])) for leg in generated}
     start = wiring.at[f"ray_{wiring.rays[0]}"]
