@@ -219,3 +219,48 @@ def test_missing_meter_tells_nothing_and_breaks_nothing(circuits):
     watched.take(given for given in shed.steady(4) if getattr(given, "meter", "") != "leg3")
     assert watched.last.angles == "not seen"
     assert not figure(watched.last, "bank", "run", "position").is_known
+
+
+def unsigned(settings, kind):
+    """The settings with leg meters that give no sign of reactive power, or none at all."""
+    maps = {name: replace(found, reactive=kind) for name, found in settings.maps.items() if name == "din-float32"}
+    legs = tuple(m.model_copy(update={"map": "quiet"}) if m.at == "leg" else m for m in settings.meter)
+    quiet = maps["din-float32"]
+    if kind == "none":
+        quiet = replace(quiet, points=tuple(p for p in quiet.points if p.quantity != "reactive_power"))
+    return settings.model_copy(update={"meter": legs, "maps": dict(settings.maps) | {"quiet": quiet}})
+
+
+@pytest.mark.parametrize("kind", ["unsigned", "none"])
+def test_meters_without_the_sign_of_reactive_power_serve_with_the_sign_as_a_hypothesis(kind):
+    settings = unsigned(PER_PHASE, kind)
+    known = learned(settings, seed=3)
+    shed = started(Shed(settings, seed=3)).machines(planer=0.55).settle(3.0)
+    found = Watched(settings, known).take(shed.steady(5))
+    assert found.angles == "recovered"
+    told = figure(found, *FACTOR)
+    assert told.value == pytest.approx(true_factor(shed), abs=0.01)
+    assert figure(found, "bank", "run", "position").value == 1.0
+    assert any("reactive power" in remark for remark in found.remarks)
+
+
+@pytest.mark.parametrize(("meter", "factor"), [("leg2", 1.6), ("leg3", 0.5), ("supply", 1.4)])
+def test_measurement_that_fits_worst_is_named(meter, factor, circuits):
+    """An ammeter that has begun to read wrong; its current, powers and apparent power with it."""
+    shed = started(Shed(SUPPLIED, seed=3)).machines(planer=0.6, extractor=0.5).settle(3.0)
+    watched = Watched(SUPPLIED, circuits["2s with a supply meter"])
+    spoilt = ("current", "active_power", "reactive_power", "apparent_power")
+
+    def spoil(given):
+        if getattr(given, "meter", "") != meter:
+            return given
+        wrong = {key: v * factor if key[1] in spoilt else v for key, v in given.values.items()}
+        return replace(given, values=wrong)
+
+    watched.take(map(spoil, shed.steady(6)))
+    remarks = " ".join(watched.last.remarks)
+    assert "the circuit does not explain this sample" in remarks
+    assert f"{meter}'s power" in remarks
+    # leg 1's power comes in only where the supply's does: which of the two is wrong nothing can tell
+    assert ("fits worst" in remarks) == (meter != "supply")
+    assert ("leg1's" in remarks) == (meter == "supply")

@@ -28,7 +28,7 @@ from idlerwatch.core.converter.circuit import Complexes, Floats, Positions
 from idlerwatch.core.converter.circuit import Sample as CircuitSample
 from idlerwatch.core.converter.hypotheses import PART, Catalogue, Hypothesis, catalogue
 from idlerwatch.core.converter.known import KnownCircuit
-from idlerwatch.core.converter.recover import QUANTITIES, Circuit, Recoverer, Recovery
+from idlerwatch.core.converter.recover import QUANTITIES, Circuit, Recoverer, Recovery, take
 from idlerwatch.core.converter.track import SEPARABLE, Tracking, begin_tracking, track
 from idlerwatch.core.converter.usual import UsualLegs
 from idlerwatch.core.electrical.sequence import sequence_components
@@ -314,7 +314,7 @@ def _found(judge: Judge, state: CircuitState, given: CircuitSample, recovery: Re
         backwards=probability_of(lambda number: judge.catalogue.hypotheses[number].mirrored, shares),
         misfit=float(recovery.chi_square[0, best]) / judge.plan.wiring.rows,
         ratios=_ratios(judge, state),
-        remarks=(*_always(judge), *_misfits(judge, recovery, best), *_undecided(judge, shares)),
+        remarks=(*_always(judge), *_misfits(judge, given, recovery, best), *_undecided(judge, shares)),
     )
     if is_recovered:
         found = _with_angles(judge, found, recovery, best)
@@ -444,31 +444,43 @@ def with_recovered(seen: Estimate, found: Found) -> Estimate:
 
 BELIEVED_MISFIT: Final = 4.0
 """Chi-square over the rows from which on the circuit is said not to explain a sample."""
+FAR_BETTER: Final = 3.0
+"""A measurement is named alone where without any other this many times the chi-square is left."""
 
 
 def _always(judge: Judge) -> tuple[str, ...]:
     return (judge.remark,) if judge.remark else ()
 
 
-def _misfits(judge: Judge, recovery: Recovery, best: int) -> tuple[str, ...]:
-    """Name the measurement that fits worst where nothing explains the sample."""
+def _misfits(judge: Judge, given: CircuitSample, recovery: Recovery, best: int) -> tuple[str, ...]:
+    """Name the measurement without which the circuit would hold, where nothing explains the sample."""
     if not float(recovery.chi_square[0, best]) / judge.plan.wiring.rows > BELIEVED_MISFIT:
         return ()
-    worst = int(np.abs(recovery.normalised[0, best]).argmax())
-    return (f"the circuit does not explain this sample; {row_name(judge.plan, worst)} fits worst",)
+    names, left = _without_each(judge, given)
+    order = np.argsort(left)
+    first = names[int(order[0])]
+    if len(names) > 1 and left[order[1]] < FAR_BETTER * left[order[0]]:
+        others = [names[int(index)] for index in order if left[index] < FAR_BETTER * left[order[0]]]
+        return (f"the circuit does not explain this sample; one of {', '.join(others)} may be wrong",)
+    return (f"the circuit does not explain this sample; {first} fits worst",)
 
 
-def row_name(own: CircuitPlan, row: int) -> str:
-    """Return which measurement an equation is about."""
-    wiring = own.wiring
-    first, sides = len(wiring.generated), len(wiring.supply)
-    if row < 2 * (first + sides):
-        channel = own.channels[row // 2 if row // 2 < first else row // 2 + sides]
-        return f"{channel.meter}'s {('active', 'reactive')[row % 2]} power"
-    row -= 2 * (first + sides)
-    if row < len(own.ammeters):
-        return f"{own.ammeters[row].meter}'s current"
-    return f"the voltage {own.lines[row - len(own.ammeters)]}"
+def _without_each(judge: Judge, given: CircuitSample) -> tuple[tuple[str, ...], Floats]:
+    """Return what is measured, and the chi-square that is left in the expected position without each of them."""
+    own, count = judge.plan, len(judge.plan.channels)
+    names = [f"{channel.meter}'s power of {channel.through}" for channel in own.channels]
+    names += [f"{channel.meter}'s current" for channel in own.ammeters] + [f"the voltage {pair}" for pair in own.lines]
+    every = take(given, np.zeros(len(names), dtype=np.int64))
+    spreads, ammeters, lines = every.spreads.copy(), every.ammeters.copy(), every.lines.copy()
+    for index in range(count):
+        spreads[index, index] = UNKNOWN_SPREAD
+    for index in range(len(own.ammeters)):
+        ammeters[count + index, index] = math.nan
+    for index in range(len(own.lines)):
+        lines[count + len(own.ammeters) + index, index] = math.nan
+    expected = Recoverer(own.wiring, judge.expected, judge.circuit)
+    left = expected.recover(replace(every, spreads=spreads, ammeters=ammeters, lines=lines)).chi_square[:, 0]
+    return tuple(names), left
 
 
 def _undecided(judge: Judge, shares: Floats) -> tuple[str, ...]:

@@ -35,7 +35,7 @@ FARTHEST_STEP_BACK_S: Final = 3600.0
 
 ROOT_MEAN_SQUARE: Final = frozenset({
     "voltage", "voltage_ratio", "current", "current_ratio", "neutral_earth_voltage", "neutral_shift",
-    "zero_sequence_voltage", "positive_sequence_voltage", "negative_sequence_voltage",
+    "usual_voltage", "zero_sequence_voltage", "positive_sequence_voltage", "negative_sequence_voltage",
 })  # fmt: skip
 COUNTERS: Final = frozenset({"active_energy_import"})
 STANDING: Final = frozenset({"unacknowledged", "acknowledged"})
