@@ -38,7 +38,9 @@ def test_links_lead_somewhere(document):
 def test_options_that_documents_name_exist(document):
     words = set()
     for name in COMMANDS:
-        words |= {option for parameter in program.get_command(None, name).params for option in parameter.opts}
+        command = program.get_command(None, name)
+        for each in (command, *getattr(command, "commands", {}).values()):
+            words |= {option for parameter in each.params for option in parameter.opts}
     places = [*(ROOT / "deploy").glob("*.sh"), *(ROOT / "tests" / "bench").glob("*.py")]
     scripts = "".join(path.read_text() for path in places)
     for option in re.findall(r"(?<![\w-])--[a-z][a-z-]+", document.read_text()):
