@@ -244,7 +244,9 @@ def _lines(given: Assessment) -> Iterator[tuple[str, str]]:
     )
     for measurement in ("bank", "capacitor", "machine"):
         for subject in dict.fromkeys(key[1] for key in given.figures if key[0] == measurement):
-            yield f"{measurement} {subject}", _of_thing(given, measurement, subject)
+            text = _of_thing(given, measurement, subject)
+            if measurement != "capacitor" or text != NOT_MEASURED:
+                yield f"{measurement} {subject}", text
     yield "circuit", _circuit(given)
     yield "neutral-earth", told_with_uncertainty(given.figure("earthing", "converter", "neutral_earth_voltage"), volts)
     yield "meters", silent_meters(given)
@@ -275,7 +277,7 @@ def bank_position(given: Assessment, name: str) -> str:
     if not sure.is_known:
         return "position not seen"
     if not position.is_known:
-        return f"undecided (likeliest {percent(min(sure.value, 0.999))} sure)"
+        return f"undecided: the likeliest is {percent(min(sure.value, 0.999))} sure"
     word = {1.0: "closed", 0.0: "open"}.get(position.value, "partly in: chatter?")
     return f"{word}, over 99.9 % sure from the circuit"
 
