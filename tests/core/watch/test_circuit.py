@@ -18,6 +18,7 @@ from idlerwatch.core.watch.compile import compile_plan
 from idlerwatch.core.watch.wiring import circuit_plan
 from idlerwatch.edges.files import config_directory, load_settings
 from idlerwatch.rig.plant import pulled_backwards
+from idlerwatch.rig.values import OPEN
 
 EXAMPLE = load_settings(config_directory() / "example.toml")
 
@@ -264,3 +265,21 @@ def test_measurement_that_fits_worst_is_named(meter, factor, circuits):
     # leg 1's power comes in only where the supply's does: which of the two is wrong nothing can tell
     assert ("fits worst" in remarks) == (meter != "supply")
     assert ("leg1's" in remarks) == (meter == "supply")
+
+
+@pytest.mark.parametrize("level", [None, *LEVELS])
+def test_fault_that_is_none_of_the_hypotheses_is_not_taken_for_the_least_bad_of_them(level, circuits):
+    """A lead of the idler comes loose under load: neither backwards nor a capacitor, and the circuit says so."""
+    settings, known = (SUPPLIED, None) if level is None else (LEVELS[level], circuits[level])
+    shed = started(Shed(settings, seed=3)).machines(planer=0.4).settle(3.0)
+    watched = Watched(settings, known)
+    watched.take(shed.steady(8))
+    parted = np.zeros((1, 3))
+    parted[0, 2] = OPEN
+    shed.fault(lead_resistance=parted).settle(2.0)
+    watched.take(shed.steady(30))
+    tags = {event.alarm.tag for event in watched.events}
+    assert not tags & {"running-backwards", "capacitor-lost", "bank-not-closed", "start-bank-in"}
+    if known is not None:
+        assert "the circuit does not explain this sample" in " ".join(watched.last.remarks)
+        assert math.isnan(figure(watched.last, "bank", "run", "position").value)

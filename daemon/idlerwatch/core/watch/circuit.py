@@ -53,6 +53,11 @@ LEAST_RAY, MOST_VOLTS, MOST_AMPERES = 0.2, 4.0, 20.0
 """Ratios to nominal voltage and rated current beyond which a reading is none of a running converter."""
 LEAST_HEIGHT: Final = 0.3
 """Generated legs below this ratio of nominal are no running converter's."""
+NONE_FITS: Final = 40.0
+"""Chi-square beyond which "none of the hypotheses" is likelier than the best: a true one leaves about as many as there
+are equations."""
+NONE_WEIGHT: Final = 0.3
+FEWEST_SAMPLES: Final = 3
 CONTACT_ERROR: Final = 0.01
 """How often an auxiliary contact says what is not so (common practice, no source)."""
 COIL_ERROR: Final = 0.03
@@ -84,11 +89,13 @@ class Judge:
 class CircuitState(NamedTuple):
     """What is remembered from sample to sample; the belief begins anew with each run of the converter.
 
-    `tracked` and `last` are the load at the last state taken for the capacitors and at the last sample.
+    `runs_forwards` is set once that is decided: an idler does not turn round while it runs. `tracked` and `last` are the
+    load at the last state taken for the capacitors and at the last sample.
     """
 
     belief: Belief
     running_since: float = math.nan
+    runs_forwards: bool = False
     tracking: Tracking | None = None
     tracked_at: float = -math.inf
     tracked: Floats = np.zeros(0)
@@ -179,7 +186,7 @@ def begin_circuit(judge: Judge | None) -> CircuitState:
     """Return the state before the first sample."""
     if judge is None:
         return CircuitState(begin_belief(1))
-    return CircuitState(begin_belief(len(judge.weights)), tracking=begin_tracking(judge.plan.wiring))
+    return CircuitState(begin_belief(len(judge.weights) + 1), tracking=begin_tracking(judge.plan.wiring))
 
 
 def _contacts(settings: Settings, own: CircuitPlan, ways: Catalogue) -> Mapping[str, Floats]:
@@ -242,15 +249,43 @@ def judge_circuit(
     if judge is None or life.state != "running":
         return state._replace(running_since=math.nan), NOTHING
     if life.since != state.running_since:
-        state = state._replace(belief=begin_belief(len(judge.weights)), running_since=life.since)
+        fresh = begin_belief(len(judge.weights) + 1)
+        state = state._replace(belief=fresh, running_since=life.since, runs_forwards=False)
     given = circuit_sample(judge.plan, sample, derived)
     if not is_sound(judge.plan, given) or not derived.generated >= LEAST_HEIGHT or life.loading == "machine starting":
         return state, NOTHING._replace(remarks=_always(judge))
     recovery = judge.recoverer.recover(given)
-    evidence = recovery.log_likelihood[0] + _told_by_contacts(judge, derived)
-    state = state._replace(belief=believe(state.belief, evidence))
+    state = _believed(judge, state, _evidence(judge, recovery, derived))
     state = _tracked(judge, state, given, sample.at)
     return state, _found(judge, state, given, recovery)
+
+
+def _evidence(judge: Judge, recovery: Recovery, derived: Derived) -> Floats:
+    """Return the sample's log-likelihood under each hypothesis, and last under none of them: (h + 1,).
+
+    A fault nobody thought of fits none; the least bad of them must not be taken for it.
+    """
+    told = recovery.log_likelihood[0]
+    otherwise = told[0] + 0.5 * (recovery.chi_square[0, 0] - NONE_FITS)
+    return np.append(told + _told_by_contacts(judge, derived), otherwise)
+
+
+def _believed(judge: Judge, state: CircuitState, evidence: Floats) -> CircuitState:
+    belief = believe(state.belief, evidence)
+    state = state._replace(belief=belief)
+    if belief.samples < FEWEST_SAMPLES or state.runs_forwards:
+        return state
+    shares = _shares(judge, state)
+    backwards = probability_of(lambda number: judge.catalogue.hypotheses[number].mirrored, shares)
+    return state._replace(runs_forwards=backwards + 1.0 - float(shares.sum()) < 1.0 - SURE)
+
+
+def _shares(judge: Judge, state: CircuitState) -> Floats:
+    """Return the probability of each hypothesis (h,); what is left to one is that none of them holds."""
+    weights = np.append(judge.weights, NONE_WEIGHT)
+    if state.runs_forwards:
+        weights[:-1][judge.catalogue.positions.mirrored] = 0.0
+    return probabilities(state.belief, weights)[:-1]
 
 
 def is_sound(own: CircuitPlan, given: CircuitSample) -> bool:
@@ -290,8 +325,7 @@ def _tracked(judge: Judge, state: CircuitState, given: CircuitSample, at: float)
     is_due = at - state.tracked_at >= TRACKED_EVERY_S
     if not (judge.is_learned and is_steady and is_new and is_due) or state.tracking is None:
         return state
-    shares = probabilities(state.belief, judge.weights)
-    if shares[0] < SURE:
+    if _shares(judge, state)[0] < SURE:
         return state
     elapsed = min(at - state.tracked_at, 30.0 * 86400.0) if math.isfinite(state.tracked_at) else 0.0
     after = track(state.tracking, judge.plan.wiring, judge.expected, given, judge.circuit, elapsed=elapsed)
@@ -304,7 +338,7 @@ def _tracked(judge: Judge, state: CircuitState, given: CircuitSample, at: float)
 
 
 def _found(judge: Judge, state: CircuitState, given: CircuitSample, recovery: Recovery) -> Found:
-    shares = probabilities(state.belief, judge.weights)
+    shares = _shares(judge, state)
     best = int(recovery.likeliest[0])
     is_recovered = bool(np.sqrt(np.diagonal(recovery.angle_covariance[0, best])).max() < LEAST_ANGLE)
     found = Found(
