@@ -89,8 +89,8 @@ class Judge:
 class CircuitState(NamedTuple):
     """What is remembered from sample to sample; the belief begins anew with each run of the converter.
 
-    `runs_forwards` is set once that is decided: an idler does not turn round while it runs. `tracked` and `last` are the
-    load at the last state taken for the capacitors and at the last sample.
+    `runs_forwards` is set once that is decided: an idler does not turn round while it runs. `tracked` and `last` are
+    the load at the last state taken for the capacitors and at the last sample.
     """
 
     belief: Belief
