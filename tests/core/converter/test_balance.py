@@ -319,3 +319,29 @@ def test_trust_in_the_laws_ends_beyond_ordinary_voltage_and_unbalance():
     uneven = 230.0 * (1.0 + 3.0 * 0.15 / 0.85)
     ratio = (230.0 + 230.0 * 0.15 / 0.85) / 230.0
     assert strain([uneven, 230.0, 230.0]) == pytest.approx(1.0 + (ratio - 1.1) / 0.03 + 1.0, rel=1e-6)
+
+
+def test_unlike_windings_of_a_floating_star_let_no_zero_sequence_through():
+    """Against the nodal solver: the star point a node of its own, joined to nothing (Kron reduction).
+
+    To first order in the asymmetry; the zero-sequence admittance then drops out, whatever it is.
+    """
+    wiring = replace(TIED, tied=False, cans=(), banks=0)
+    values = {"asymmetry_1": 0.002, "asymmetry_2": -0.003}
+    rng = np.random.default_rng(2)
+    rays, angles = 230.0 * rng.uniform(0.8, 1.05, 3), np.array([[-TURN + 0.3, TURN + 0.2]])
+    potentials = rays * np.exp(1j * np.array([0.0, *angles[0]]))
+    sample = Sample(
+        rays[None], np.zeros((1, 2), dtype=complex), np.zeros((1, 2, 2)), np.zeros((1, 0)), np.zeros((1, 0))
+    )
+    parameters = parameters_of(wiring, saturation_1=0.0, saturation_2=0.0, friction=0.0, braking=0.0, **values)
+    found = residuals(wiring, nominal_positions(wiring), np.zeros(1, dtype=np.int64), parameters, sample, angles)
+    units = potentials[1:] / rays[1:]
+    root = np.sqrt(1.0 + np.array([0.002, -0.003, 0.001]))
+    base = wiring.rated_current / wiring.nominal_voltage
+    sequences = base * np.array([7.0 - 12.0j, 0.05 - 0.48j, 2.0 - 5.7j])
+    legs = with_terminal(root[:, None] * winding_matrix(sequences) * root)
+    wanted = (behind_impedances(legs, np.array([0.0, 0.0, 0.0, 1e9])) @ np.array([*potentials, 0.0]))[1:3]
+    told = found.view(np.complex128)[0] * units
+    unlike = np.abs(winding_matrix(np.array([0.0, *sequences[1:]])) @ potentials)[1:]
+    assert np.abs(told - wanted).max() < 0.02 * 0.003 * unlike.max()

@@ -75,13 +75,24 @@ class Balance:
         self.bending = self._block("saturation_1", len(KNEES))
         self.y0 = complex(named["g0"], -named["b0"]) * wiring.tied
         self.y2 = complex(named["g2"], -named["b2"])
-        self.scale = 1.0 + 0.5 * (self._block("asymmetry_1", 2) @ _SPREAD)
+        self._place_windings()
         self.kept = np.ones(3)
         self.kept[self.rays] = 1.0 - self._block(f"ray_{wiring.rays[0]}", len(wiring.rays))
         errors = self._block("channel_0_gain", 2 * len(wiring.channels))
         self._told_scale = 1.0 - errors[0::2] - 1j * errors[1::2]
         self._ammeter_scale = 1.0 - self._block("ammeter_0", len(wiring.ammeters))
         self._line_scale = 1.0 - self._block("line_0", len(wiring.lines))
+
+    def _place_windings(self) -> None:
+        """What the sequences see of the legs (3, 3), and what the legs get of them: unlike windings mix them.
+
+        A star point that floats stands where the currents' sum is nought; to first order in the asymmetry that takes
+        the legs' mean out of the voltages, and out of the currents (derived).
+        """
+        scale = 1.0 + 0.5 * (self._block("asymmetry_1", 2) @ _SPREAD)
+        self.passing = np.eye(3) if self.wiring.tied else np.eye(3) - 1.0 / 3.0
+        self.seen_by = (self.passing * scale) @ _FROM_LEGS
+        self.given_by = (_TO_LEGS * scale) @ self.passing
 
     def _block(self, first: str, count: int) -> Floats:
         start = self.wiring.at[first] if count else 0
@@ -174,7 +185,7 @@ class Point:
     def _see(self) -> _Flows:
         """Return what the idler sees at these potentials."""
         balance = self._balance
-        components = (self.potentials * balance.scale) @ _FROM_LEGS
+        components = self.potentials @ balance.seen_by
         if balance.has_mirrored:
             components = np.where(balance.mirrored, components[:, _SWAPPED], components)
         squares = components.real**2 + components.imag**2
@@ -204,7 +215,7 @@ class Point:
         if balance.has_mirrored:
             mirrored = balance.mirrored[:, None] if flows.ndim > 2 else balance.mirrored
             flows = np.where(mirrored, flows[..., _SWAPPED], flows)
-        currents: Complexes = (flows @ _TO_LEGS) * balance.scale
+        currents: Complexes = flows @ balance.given_by
         return currents
 
     def strain(self) -> Floats:
@@ -288,8 +299,7 @@ class Point:
     def _taken_by(self, moves: Complexes, legs: Index) -> Complexes:
         """Return how what idler and capacitors take follows moves of single legs: (b, q, 3)."""
         balance, flows = self._balance, self._flows
-        scaled = moves * balance.scale[legs]
-        components = scaled[:, :, None] * _FROM_LEGS[legs]
+        components = moves[:, :, None] * balance.seen_by[legs]
         if balance.has_mirrored:
             components = np.where(balance.mirrored[:, :, None], components[..., _SWAPPED], components)
         sequences = flows.admittances[:, None, :] * components
@@ -376,11 +386,13 @@ class Point:
         """Return how what the idler takes follows its asymmetries (the slip's answer aside): (b, 2, 3)."""
         balance = self._balance
         spread = 0.5 * _SPREAD
-        moved = (self.potentials[:, None, :] * spread) @ _FROM_LEGS
+        moved = ((self.potentials @ balance.passing)[:, None, :] * spread) @ _FROM_LEGS
+        flows = self._flows.admittances * self._flows.components
         if balance.has_mirrored:
             moved = np.where(balance.mirrored[:, :, None], moved[..., _SWAPPED], moved)
+            flows = np.where(balance.mirrored, flows[:, _SWAPPED], flows)
         through = self._to_legs(self._flows.admittances[:, None, :] * moved)
-        taken: Complexes = through + (self._idler / balance.scale)[:, None, :] * spread
+        taken: Complexes = through + ((flows @ _TO_LEGS)[:, None, :] * spread) @ balance.passing
         return taken
 
     def _by_channels(self, slopes: Floats) -> None:
