@@ -21,8 +21,8 @@ from idlerwatch.core.converter.circuit import (
     Sample,
     Wiring,
     nominal_positions,
-)from idlerwatch.core.converter.network import behind_impedances, winding_matrix, with_terminal
-
+)
+from idlerwatch.core.converter.network import behind_impedances, winding_matrix, with_terminal
 
 TURN = 2.0 * math.pi / 3.0
 TIED = Wiring(

@@ -29,7 +29,7 @@ FRICTION: Final = (0.6, 0.25)
 """Share of the no-load conductance that is friction's constant power (the rest is copper and core)."""
 BRAKING: Final = (0.45, 0.15)
 """Rotor's share of the negative-sequence conductance: its loss is what the positive sequence must carry."""
-LEAST_RELATIVE: Final = 0.25
+LEAST_RELATIVE: Final = 0.2
 """No admittance is known better than this from a plate."""
 LEAST: Final = 1e-3
 """Nor better than this, over the base admittance: a floating star's Y0 is nought and means nothing."""
