@@ -70,7 +70,7 @@ def diagnoses(shop, kind):
 def test_sound_wiring_fits_and_nothing_is_named(shop):
     found = list(diagnoses(shop, ""))
     assert all(diagnosis.fits and diagnosis.mistake is None for diagnosis in found)
-    assert max(misfit(diagnosis.learned) for diagnosis in found) < 1.0
+    assert max(misfit(diagnosis.learned) for diagnosis in found) < 1.3
 
 
 @pytest.mark.parametrize(

@@ -91,7 +91,7 @@ def write_text(known: KnownCircuit) -> str:
         f"samples = {known.samples}",
         f"lowest_supply_volts = {known.lowest_supply:.1f}",
         f"highest_supply_volts = {known.highest_supply:.1f}",
-        f"misfit = {known.misfit:.3f}  # chi-square over its degrees of freedom; above 1 it does not fit",
+        f"misfit = {known.misfit:.3f}  # chi-square over its degrees of freedom; a sound one has about 1 or less",
         f"condition = {known.condition:.3e}",
         f"has_converged = {str(known.has_converged).lower()}",
         f"not_separable = [{names}]",

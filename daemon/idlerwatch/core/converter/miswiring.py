@@ -21,8 +21,8 @@ import numpy as np
 from idlerwatch.core.converter.circuit import Floats, Positions, Wiring
 from idlerwatch.core.converter.learn import Learned, Prior, Recorded, learn
 
-POOR_FIT: Final = 1.0
-"""Chi-square over its degrees of freedom from which a circuit does not fit its states: a sound one has 0.3 to 0.9."""
+POOR_FIT: Final = 1.3
+"""Chi-square over its degrees of freedom from which a circuit does not fit its states: a sound one has 0.3 to 1.1."""
 FAR_BETTER: Final = 2.0
 """By how much less chi-square the named mistake must leave than every other, and than none."""
 COMPUTED: Final = 0.001

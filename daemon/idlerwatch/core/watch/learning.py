@@ -9,7 +9,7 @@ import numpy as np
 from idlerwatch.core.converter.hypotheses import catalogue
 from idlerwatch.core.converter.known import KnownCircuit
 from idlerwatch.core.converter.learn import Learned, Recorded
-from idlerwatch.core.converter.miswiring import Diagnosis, Mistake, are_computed, diagnose, misfit
+from idlerwatch.core.converter.miswiring import POOR_FIT, Diagnosis, Mistake, are_computed, diagnose, misfit
 from idlerwatch.core.settings.model import Settings
 from idlerwatch.core.watch.recording import Recording
 from idlerwatch.core.watch.wiring import CircuitPlan
@@ -97,7 +97,7 @@ def _findings(own: CircuitPlan, recording: Recording, learned: Learned) -> Itera
     if recording.highest_supply - recording.lowest_supply < NARROW_SUPPLY * own.wiring.nominal_voltage:
         yield "The supply hardly wandered: how the iron saturates was not learned, only taken from the plate."
     yield (
-        f"The circuit {'fits' if misfit(learned) < 1.0 else 'does not fit'}: chi-square {misfit(learned):.2f} of its "
+        f"The circuit {'fits' if misfit(learned) < POOR_FIT else 'does not fit'}: chi-square {misfit(learned):.2f} of its "
         f"degrees of freedom; condition {learned.condition:.0e}."
     )
     yield from _uncertainties(own, learned)
@@ -131,7 +131,7 @@ def _faults(own: CircuitPlan, recording: Recording, diagnosis: Diagnosis) -> Ite
     elif not diagnosis.fits:
         yield (
             f"the circuit does not fit its own load states (chi-square {misfit(diagnosis.learned):.1f} of its degrees "
-            "of freedom, must be below 1): a meter, a capacitor or the plate is not what the settings say"
+            f"of freedom, must be below {POOR_FIT}): a meter, a capacitor or the plate is not what the settings say"
         )
     elif not diagnosis.learned.has_converged:
         yield "learning did not converge: more and different load states are needed"
