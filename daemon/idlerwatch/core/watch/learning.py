@@ -130,8 +130,9 @@ def _faults(own: CircuitPlan, recording: Recording, diagnosis: Diagnosis) -> Ite
         yield mistake_words(own, diagnosis.mistake)
     elif not diagnosis.fits:
         yield (
-            f"the circuit does not fit its own load states (chi-square {misfit(diagnosis.learned):.1f} of its degrees "
-            f"of freedom, must be below {POOR_FIT}): a meter, a capacitor or the plate is not what the settings say"
+            f"the circuit does not fit its own load states (chi-square {misfit(diagnosis.learned):.1f} of its "
+            f"degrees of freedom, must be below {POOR_FIT}): a meter, a capacitor or the plate is not what the "
+            "settings say"
         )
     elif not diagnosis.learned.has_converged:
         yield "learning did not converge: more and different load states are needed"
