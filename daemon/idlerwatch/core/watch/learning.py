@@ -96,9 +96,10 @@ def _findings(own: CircuitPlan, recording: Recording, learned: Learned) -> Itera
         yield "That is few: more machines, alone and together, at other supply voltages make it surer."
     if recording.highest_supply - recording.lowest_supply < NARROW_SUPPLY * own.wiring.nominal_voltage:
         yield "The supply hardly wandered: how the iron saturates was not learned, only taken from the plate."
+    verdict = "fits" if misfit(learned) < POOR_FIT else "does not fit"
     yield (
-        f"The circuit {'fits' if misfit(learned) < POOR_FIT else 'does not fit'}: chi-square {misfit(learned):.2f} of its "
-        f"degrees of freedom; condition {learned.condition:.0e}."
+        f"The circuit {verdict}: chi-square {misfit(learned):.2f} of its degrees of freedom; "
+        f"condition {learned.condition:.0e}."
     )
     yield from _uncertainties(own, learned)
     lost = not_separable(own, learned)
