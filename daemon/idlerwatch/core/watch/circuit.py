@@ -80,6 +80,7 @@ class Judge:
     catalogue: Catalogue
     recoverer: Recoverer
     expected: Positions
+    alone: Recoverer
     usual: UsualLegs
     contacts: Mapping[str, Floats]
     weights: Floats
@@ -163,6 +164,7 @@ def compile_judge(
         catalogue=ways,
         recoverer=Recoverer(own.wiring, ways.positions, circuit),
         expected=first,
+        alone=Recoverer(own.wiring, first, circuit),
         usual=UsualLegs(own.wiring, first, circuit.parameters),
         contacts=_contacts(settings, own, ways),
         weights=ways.weights,
@@ -512,8 +514,7 @@ def _without_each(judge: Judge, given: CircuitSample) -> tuple[tuple[str, ...], 
         ammeters[count + index, index] = math.nan
     for index in range(len(own.lines)):
         lines[count + len(own.ammeters) + index, index] = math.nan
-    expected = Recoverer(own.wiring, judge.expected, judge.circuit)
-    left = expected.recover(replace(every, spreads=spreads, ammeters=ammeters, lines=lines)).chi_square[:, 0]
+    left = judge.alone.recover(replace(every, spreads=spreads, ammeters=ammeters, lines=lines)).chi_square[:, 0]
     return tuple(names), left
 
 
