@@ -17,7 +17,7 @@ from idlerwatch.core.converter.miswiring import Mistake, are_computed, diagnose,
 from idlerwatch.core.converter.nameplate import Nameplate
 from idlerwatch.core.converter.prior import Limits, prior_of
 
-COUNT, STATES = 12, 12
+COUNT, STATES = 6, 12
 TURN = np.exp(2j * np.pi / 3.0)
 
 
